@@ -1,0 +1,1 @@
+"""Dark current from dark traces, and its dependence on bias."""

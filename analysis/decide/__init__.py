@@ -1,0 +1,1 @@
+"""Verdicts against limits, and the choice of bias and load."""

@@ -1,0 +1,1 @@
+"""The edge of the analysis: captures, tables, run folders and TOML files."""

@@ -1,0 +1,1 @@
+"""Capacitance against reverse bias, and the speed that follows from it."""

@@ -1,0 +1,1 @@
+"""Devices and lots: how single verdicts add up."""

@@ -1,0 +1,1 @@
+"""The edge of the analysis: plots and the report page."""

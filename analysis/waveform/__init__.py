@@ -1,0 +1,1 @@
+"""State levels, edges, delays and widths of one capture or many."""

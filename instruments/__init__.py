@@ -1,0 +1,1 @@
+"""Talks to the bench over SCPI; knows nothing of models or limits."""
