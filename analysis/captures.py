@@ -92,9 +92,7 @@ class TimedRecord:
     def __post_init__(self) -> None:
         signal, time = _frozen(self.signal_V, "signal"), _frozen(self.time_s, "time")
         if signal.size != time.size:
-            raise CaptureError(
-                "signal and time differ in length", found=f"{signal.size} and {time.size} samples"
-            )
+            raise CaptureError("signal and time differ in length", found=f"{signal.size} and {time.size} samples")
         if not bool(np.all(np.diff(time) > 0)):
             raise CaptureError("the time does not rise from sample to sample")
         object.__setattr__(self, "signal_V", signal)

@@ -22,9 +22,7 @@ class DarkedgeError(Exception):
 
     exit_status: ClassVar[int] = 2
 
-    def __init__(
-        self, what: str, *, where: str = "", found: str = "", wanted: str = "", mend: str = ""
-    ) -> None:
+    def __init__(self, what: str, *, where: str = "", found: str = "", wanted: str = "", mend: str = "") -> None:
         self.what = what
         self.where = where
         self.found = found

@@ -87,9 +87,7 @@ class Fixture:
         return Estimate(value=both, u=u_both)
 
     def _input(self, input_ohm: float | None) -> tuple[float | None, float]:
-        if self.scope_input_ohm is None or (
-            input_ohm is not None and abs(self.scope_input_ohm / input_ohm - 1) > 0.1
-        ):
+        if self.scope_input_ohm is None or (input_ohm is not None and abs(self.scope_input_ohm / input_ohm - 1) > 0.1):
             return input_ohm, 0.0
         return self.scope_input_ohm, self.u_scope_input_ohm
 

@@ -111,9 +111,7 @@ def _with_unit(number: str, written: str, key: str, found: str) -> float:
         return float(Quantity(f"{number} {written}"))
     wanted = f"a number{f' in {unit.symbol}' if unit.symbol else ''}"
     if unit.prefixed and written in _PREFIXES:
-        raise _wrong(
-            "has a prefix and no unit", key, found, mend=f"write {number} {written}{unit.spellings[0]}"
-        )
+        raise _wrong("has a prefix and no unit", key, found, mend=f"write {number} {written}{unit.spellings[0]}")
     raise _wrong("has the wrong unit", key, found, wanted=wanted)
 
 
@@ -126,9 +124,7 @@ def _finite(number: float, key: str, found: str) -> float:
 def _wrong(what: str, key: str, found: str, *, wanted: str = "", mend: str = "") -> InputError:
     unit = unit_of(key)
     example = f"12 {unit.symbol}".rstrip() if unit.symbol else "0.5"
-    return InputError(
-        f"{key} {what}", found=found, wanted=wanted or f"a quantity such as {example}", mend=mend
-    )
+    return InputError(f"{key} {what}", found=found, wanted=wanted or f"a quantity such as {example}", mend=mend)
 
 
 def format_quantity(value: float | None, unit: str, *, u: float | None = None) -> str:

@@ -96,9 +96,7 @@ def test_nothing_else_stands_at_the_root() -> None:
 
 
 def test_every_folder_with_code_is_packaged() -> None:
-    listed = set(
-        tomllib.loads((ROOT / "pyproject.toml").read_text("utf-8"))["tool"]["setuptools"]["packages"]
-    )
+    listed = set(tomllib.loads((ROOT / "pyproject.toml").read_text("utf-8"))["tool"]["setuptools"]["packages"])
     folders = {name for name, path in MODULES.items() if path.name == "__init__.py"}
     assert listed == folders
 
@@ -124,9 +122,7 @@ def test_shipped_code_uses_the_library_it_depends_on(library: str) -> None:
 
 def test_importing_the_command_line_loads_no_heavy_library() -> None:
     code = "import sys, darkedge.cli.main; print('\\n'.join(sys.modules))"
-    loaded = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=True
-    ).stdout.split()
+    loaded = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True).stdout.split()
     assert not set(HEAVY) & set(loaded)
 
 

@@ -1,0 +1,149 @@
+"""From captures to measurements: each kind of capture to the part that measures it."""
+
+from __future__ import annotations
+
+from bisect import bisect_left
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass
+
+from darkedge.analysis.captures import Capture, Conditions, Kind
+from darkedge.analysis.dark.traces import TraceSummary, dark_current, summarise_trace
+from darkedge.analysis.errors import DarkedgeError
+from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
+from darkedge.analysis.measurement import Estimate, Measurement
+from darkedge.analysis.waveform.measure import measure_pulse_capture
+
+FixtureFor = Callable[[str], Fixture]
+"""Gives the fixture that holds for a capture, by the capture's name."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Failure:
+    """A capture that was read and could not be measured, with the reason."""
+
+    capture: str
+    error: DarkedgeError
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Still:
+    """A dark or offset trace, kept as its summary until all offset traces of the run are known."""
+
+    place: int
+    name: str
+    element: int
+    conditions: Conditions
+    summary: TraceSummary
+    remarks: tuple[str, ...]
+
+    @property
+    def bench_place(self) -> tuple[object, ...]:
+        """What a dark trace and its offset traces have in common."""
+        known = self.conditions
+        folder = self.name.rpartition("/")[0]
+        return folder, known.run, known.lot, known.device, self.element, known.load_ohm
+
+    @property
+    def order(self) -> tuple[str, str]:
+        """Order in which the traces of a run were taken."""
+        return self.conditions.point or "", self.name
+
+
+def refused_measurement(name: str) -> Measurement:
+    """The row of a file that was refused: its name, empty quantities, and the flag."""
+    return Measurement(capture=name, element=None, conditions=Conditions(), flags=("refused",))
+
+
+def measure_captures(
+    captures: Iterable[Capture], *, fixture_for: FixtureFor = lambda _name: UNKNOWN_FIXTURE
+) -> tuple[list[Measurement], list[Failure]]:
+    """Measure many captures; never raises for one of them.
+
+    Pulse and reference captures (and captures that do not say their kind) are measured as pulses. A dark
+    trace is held against the offset traces taken just before and just after it in the same run, with the
+    same device, element and load. Waveforms are not kept: memory stays that of one capture.
+
+    Parameters
+    ----------
+    captures : iterable of Capture
+        Read one at a time.
+    fixture_for : callable
+        The fixture that holds for a capture, by name.
+
+    Returns
+    -------
+    list of Measurement
+        One for each capture and element, in the order of the captures. A capture that could not be
+        measured has one row with the flag `refused`.
+    list of Failure
+        The reasons for those.
+    """
+    rows: list[Measurement | None] = []
+    still: list[_Still] = []
+    failures: list[Failure] = []
+    for capture in captures:
+        try:
+            if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
+                traces = _summaries(capture, len(rows))
+                still.extend(traces)
+                rows.extend([None] * len(traces))
+            else:
+                rows.extend(measure_pulse_capture(capture, fixture=fixture_for(capture.name)))
+        except DarkedgeError as error:
+            failures.append(Failure(capture=capture.name, error=error))
+            rows.append(refused_measurement(capture.name))
+    for place, measurement in _still_measurements(still, fixture_for):
+        rows[place] = measurement
+    return [row for row in rows if row is not None], failures
+
+
+def _summaries(capture: Capture, place: int) -> list[_Still]:
+    known = capture.conditions
+    return [
+        _Still(
+            place=place + index,
+            name=capture.name,
+            element=known.element if known.element is not None and len(capture.outputs) == 1 else element,
+            conditions=known,
+            summary=summarise_trace(record, known),
+            remarks=capture.remarks,
+        )
+        for index, (element, record) in enumerate(sorted(capture.outputs.items()))
+    ]
+
+
+def _still_measurements(still: Sequence[_Still], fixture_for: FixtureFor) -> Iterable[tuple[int, Measurement]]:
+    offsets: dict[tuple[object, ...], list[_Still]] = {}
+    for trace in sorted(still, key=lambda t: t.order):
+        if trace.conditions.kind is Kind.OFFSET:
+            offsets.setdefault(trace.bench_place, []).append(trace)
+    for trace in still:
+        quantities: dict[str, Estimate] = {}
+        flags: tuple[str, ...] = trace.summary.flags
+        if trace.conditions.kind is Kind.DARK:
+            current, flags = dark_current(
+                trace.summary,
+                [o.summary for o in _around(trace, offsets.get(trace.bench_place, []))],
+                conditions=trace.conditions,
+                fixture=fixture_for(trace.name),
+            )
+            if current is not None:
+                quantities["dark_current_A"] = current
+        yield (
+            trace.place,
+            Measurement(
+                capture=trace.name,
+                element=trace.element,
+                conditions=trace.conditions,
+                quantities=quantities,
+                flags=(*trace.remarks, *flags),
+                levels="mean",
+                estimator="offset subtracted" if quantities else None,
+            ),
+        )
+
+
+def _around(trace: _Still, offsets: Sequence[_Still]) -> Sequence[_Still]:
+    """The offset traces taken just before and just after."""
+    after = bisect_left(offsets, trace.order, key=lambda o: o.order)
+    return offsets[max(0, after - 1) : after + 1]

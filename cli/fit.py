@@ -1,0 +1,56 @@
+"""`darkedge fit`: capacitance, speed and dark current of each device."""
+
+from __future__ import annotations
+
+import typer
+
+from darkedge.cli.common import (
+    Channels,
+    ConditionsTable,
+    FixtureFile,
+    Json,
+    Names,
+    Paths,
+    PlotFolder,
+    guarded,
+    print_table,
+    save_plots,
+    say,
+    take_in_paths,
+)
+
+
+@guarded
+def fit(
+    paths: Paths,
+    *,
+    names: Names = None,
+    conditions: ConditionsTable = None,
+    fixture: FixtureFile = None,
+    channels: Channels = None,
+    plots: PlotFolder = None,
+    json: Json = False,
+) -> int:
+    """Fit junction capacitance, shortest pulse and dark current of each device, with 95 % intervals.
+
+    Example:
+
+    darkedge fit sample_captures/photodiode --plots plots
+    """
+    intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels)
+    from darkedge.analysis.explain import explain_devices
+    from darkedge.analysis.files.results_json import fits_json
+    from darkedge.analysis.pictures.device import fit_figures
+    from darkedge.cli.listing import fit_listings
+
+    found = explain_devices(intake.measurements, fixture_for=intake.fixture_for)
+    for error in found.errors:
+        say(f"not fitted: {error}")
+    if json:
+        typer.echo(fits_json(found.devices))
+    else:
+        for title, columns, rows in fit_listings(found.devices):
+            print_table(title, columns, rows)
+    if plots is not None:
+        save_plots(plots, fit_figures(found.devices))
+    return intake.exit_status or found.exit_status

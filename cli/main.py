@@ -1,0 +1,53 @@
+"""The command `darkedge`."""
+
+from __future__ import annotations
+
+import sys
+from importlib.metadata import version
+from typing import Annotated
+
+import typer
+
+from darkedge.cli import choose, fit, measure, report, screen
+
+app = typer.Typer(
+    name="darkedge",
+    help=(
+        "Measure, explain, choose and screen fast light detectors: photodiodes, PINs, "
+        "photodiode-plus-transistor switches, optocouplers."
+    ),
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+)
+app.command("measure")(measure.measure)
+app.command("fit")(fit.fit)
+app.command("choose")(choose.choose)
+app.command("screen")(screen.screen)
+app.command("report")(report.report)
+
+
+def _version(wanted: bool) -> None:
+    if wanted:
+        typer.echo(f"darkedge {version('darkedge')}")
+        raise typer.Exit
+
+
+@app.callback()
+def main(
+    *,
+    show_version: Annotated[
+        bool, typer.Option("--version", callback=_version, is_eager=True, help="Print the version and stop.")
+    ] = False,
+) -> None:
+    """Measure, explain, choose and screen fast light detectors."""
+
+
+def run() -> None:
+    """Entry point: a console that cannot show a letter shows a question mark, never a traceback."""
+    for stream in (sys.stdout, sys.stderr):
+        reconfigure = getattr(stream, "reconfigure", None)
+        if reconfigure is not None:
+            reconfigure(errors="replace")
+    app()
