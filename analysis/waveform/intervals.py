@@ -1,0 +1,103 @@
+"""Intervals between crossings, averaged over pulses, with what noise and levels do to them kept apart.
+
+Noise differs from edge to edge and averages out; an error of a state level moves every crossing of its channel
+alike and does not. Both are carried until the last step, where they are put together (JCGM 100:2008, 5.2).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.measurement import Estimate
+from darkedge.analysis.waveform.edges import IntArray, Transitions
+from darkedge.analysis.waveform.levels import StateLevels
+
+OUTPUT, DRIVE = 0, 1
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Instants:
+    """Crossings of one level, one for each pulse.
+
+    `time_s` and `u_s` (noise and sampling) have shape (n,); `pull` (n, 4) is the shift in seconds per volt of error of
+    output low, output high, drive low and drive high level.
+    """
+
+    time_s: FloatArray
+    u_s: FloatArray
+    pull: FloatArray
+
+    def since(self, other: Instants) -> Instants:
+        """Intervals from `other` to these instants, pulse by pulse."""
+        return Instants(
+            time_s=self.time_s - other.time_s, u_s=np.hypot(self.u_s, other.u_s), pull=self.pull - other.pull
+        )
+
+    def mean(self) -> Interval:
+        """Mean over the pulses; what scatters more than its noise gets the scatter's uncertainty."""
+        n = self.time_s.size
+        u = float(np.sqrt(np.sum(self.u_s**2))) / n
+        if n >= 3:
+            u = max(u, float(np.std(self.time_s, ddof=1)) / np.sqrt(n))
+        return Interval(value_s=float(np.mean(self.time_s)), u_noise_s=u, pull=np.mean(self.pull, axis=0))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Interval:
+    """A mean interval: value, uncertainty from noise, and its pull by the four levels (see `Instants`)."""
+
+    value_s: float
+    u_noise_s: float
+    pull: FloatArray
+
+    def minus(self, other: Interval) -> Interval:
+        """Difference of two intervals; level errors that they share cancel as far as they pull alike."""
+        return Interval(
+            value_s=self.value_s - other.value_s,
+            u_noise_s=float(np.hypot(self.u_noise_s, other.u_noise_s)),
+            pull=self.pull - other.pull,
+        )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Budget:
+    """Standard uncertainties of what all intervals of a capture share."""
+
+    u_levels_V: tuple[float, float, float, float]
+    u_timebase_ratio: float = 0.0
+
+    def estimate(self, interval: Interval, *, u_more_s: float = 0.0, scale: float = 1.0) -> Estimate:
+        """Put an interval's uncertainties together; `scale` turns seconds into what is asked for."""
+        u_levels = interval.pull * np.asarray(self.u_levels_V)
+        parts = (interval.u_noise_s, self.u_timebase_ratio * abs(interval.value_s), u_more_s, *u_levels)
+        return Estimate(value=interval.value_s * scale, u=float(np.sqrt(np.sum(np.square(parts)))) * abs(scale))
+
+
+def level_uncertainties(output: StateLevels, drive: StateLevels | None) -> tuple[float, float, float, float]:
+    """Standard uncertainties of output low, output high, drive low and drive high, in volts."""
+    u_drive = (drive.u_low_V, drive.u_high_V) if drive else (0.0, 0.0)
+    return (output.u_low_V, output.u_high_V, *u_drive)
+
+
+def instants(transitions: Transitions, which: IntArray, column: int, *, channel: int = OUTPUT) -> Instants:
+    """Crossings of one reference level by some of the edges.
+
+    Parameters
+    ----------
+    which : array of int
+        Indices of edges.
+    column : int
+        Index into `transitions.fractions`.
+    channel : int
+        `OUTPUT` or `DRIVE`.
+    """
+    fraction = transitions.fractions[column]
+    slope = transitions.slope_V_per_s[which, column]
+    to_high = np.where(transitions.rising[which], fraction, 1.0 - fraction)
+    pull = np.zeros((which.size, 4))
+    pull[:, 2 * channel] = (1.0 - to_high) / slope
+    pull[:, 2 * channel + 1] = to_high / slope
+    return Instants(time_s=transitions.time_s[which, column], u_s=transitions.u_time_s[which, column], pull=pull)

@@ -1,0 +1,87 @@
+"""State levels: the low and the high that a two-level waveform goes between."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from darkedge.analysis.captures import FloatArray
+
+BINS = 256
+PLATEAU_SHARE = 0.25
+"""Share of a half's samples near its mode that makes the mode a state; a ramp or a decaying tail has less."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class StateLevels:
+    """Levels of the two states in volts, with standard uncertainties. `low_V` < `high_V`."""
+
+    low_V: float
+    high_V: float
+    u_low_V: float = 0.0
+    u_high_V: float = 0.0
+
+    @property
+    def amplitude_V(self) -> float:
+        """High state minus low state."""
+        return self.high_V - self.low_V
+
+    @property
+    def u_amplitude_V(self) -> float:
+        """Standard uncertainty of the amplitude; the two levels rest on different samples."""
+        return float(np.hypot(self.u_low_V, self.u_high_V))
+
+
+def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | None:
+    """State levels by the histogram method; `None` where the record is flat.
+
+    The range from minimum to maximum is split at its middle; the level of each state is the mode of
+    its half, refined to the mean of the samples about it. Where a half has no mode worth the name (a pulse too short
+    to settle), its level is the extreme.
+
+    Parameters
+    ----------
+    signal_V : array, shape (n,), volts
+    smooth : int
+        Length of the running mean taken first, in samples, so that noise does not widen the range.
+
+    References
+    ----------
+    IEEE Std 181-2011, 5.2, state levels by histogram (mode).
+    """
+    values = running_mean(signal_V, smooth)
+    bottom, top = float(np.min(values)), float(np.max(values))
+    if not top > bottom:
+        return None
+    counts, _ = np.histogram(values, bins=BINS, range=(bottom, top))
+    low = _mode_of_half(values, counts[: BINS // 2], bottom, top, extreme=bottom, offset=0)
+    high = _mode_of_half(values, counts[BINS // 2 :], bottom, top, extreme=top, offset=BINS // 2)
+    return StateLevels(low_V=low, high_V=high) if high > low else None
+
+
+def _mode_of_half(
+    values: FloatArray, counts: np.ndarray, bottom: float, top: float, *, extreme: float, offset: int
+) -> float:
+    width = (top - bottom) / BINS
+    # A mode three bins wide: a level on the border of two bins is one level.
+    lumped = np.convolve(counts, np.ones(3), mode="same")
+    mode = int(np.argmax(lumped))
+    reach = BINS // 20
+    near = int(np.sum(counts[max(mode - reach, 0) : mode + reach + 1]))
+    if near < PLATEAU_SHARE * int(np.sum(counts)):
+        return extreme
+    centre = bottom + (offset + mode + 0.5) * width
+    close = values[np.abs(values - centre) <= 2.5 * width]
+    return float(np.mean(close)) if close.size else centre
+
+
+def running_mean(signal_V: FloatArray, length: int) -> FloatArray:
+    """Running mean of `length` samples, centred, same shape; the ends average what there is."""
+    if length <= 1:
+        return signal_V
+    sums = np.concatenate(([0.0], np.cumsum(signal_V - signal_V[0])))
+    centres = np.arange(signal_V.size)
+    start = np.maximum(centres - length // 2, 0)
+    stop = np.minimum(centres - length // 2 + length, signal_V.size)
+    return np.asarray((sums[stop] - sums[start]) / (stop - start) + signal_V[0])

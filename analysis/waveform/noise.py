@@ -1,0 +1,145 @@
+"""How noisy a record is, and how far one sample's noise knows its neighbour's."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from darkedge.analysis.captures import FloatArray
+
+MAD_TO_SIGMA = 1.482602218505602
+"""1 / Phi^-1(3/4): median absolute deviation of normal noise to its standard deviation."""
+
+ENOUGH_FLAT_SAMPLES = 30
+"""Below this many flat samples the noise is known to worse than 13 %, 1 / sqrt(2 (n - 1)), and is called unknown."""
+
+LONGEST_LAG = 256
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Noise:
+    """Noise of one channel.
+
+    `sigma_V` is the standard deviation of one sample; `correlation` has shape (m,), the autocorrelation at
+    lags 0, 1 ... m-1 samples (lag 0 is 1), cut where it drowns in its own scatter; `n_flat` counts the
+    samples it rests on.
+    """
+
+    sigma_V: float
+    correlation: FloatArray
+    n_flat: int
+
+    @property
+    def known(self) -> bool:
+        """Whether the flat parts were long enough to tell."""
+        return self.n_flat >= ENOUGH_FLAT_SAMPLES
+
+    def inflation(self, n: int) -> float:
+        """Variance of the mean of n neighbouring samples, over that of n independent ones.
+
+        1 + 2 sum (1 - k/n) rho_k, never below 1/n of the variance of one sample (Bartlett 1946).
+        """
+        lags = np.arange(1, min(self.correlation.size, n))
+        rho = self.correlation[1 : lags.size + 1]
+        return max(1.0 + 2.0 * float(np.sum((1 - lags / n) * rho)), 1.0 / n)
+
+    def u_mean_V(self, n: int) -> float:
+        """Standard uncertainty of the mean of n neighbouring samples, in volts."""
+        return self.sigma_V * float(np.sqrt(self.inflation(n) / max(n, 1)))
+
+
+def difference_sigma(signal_V: FloatArray) -> float:
+    """Noise of one sample from the differences of neighbours, which level and drift do not enter.
+
+    Median absolute difference, scaled for normal white noise; where more than half of the differences are
+    zero (noise below one code) the root mean square of the small ones. Correlated noise comes out too low:
+    use `flat_noise` once the flat parts are known.
+
+    Parameters
+    ----------
+    signal_V : array, shape (n,), n >= 2, volts.
+    """
+    steps = np.abs(np.diff(signal_V))
+    sigma = MAD_TO_SIGMA * float(np.median(steps)) / math.sqrt(2)
+    if sigma > 0:
+        return sigma
+    moving = steps[steps > 0]
+    code = float(np.min(moving)) if moving.size else 0.0
+    if code == 0.0 or code > float(np.ptp(signal_V)) / 16:
+        return 0.0
+    small = steps[steps <= 2.5 * code]
+    return float(np.sqrt(np.mean(small**2) / 2))
+
+
+def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:
+    """Voltage of one code of the digitiser: as stated, else as seen; 0 where no steps can be seen.
+
+    Steps are seen where every difference of neighbours is a whole multiple of the smallest one.
+    """
+    if stated_V is not None and stated_V > 0:
+        return stated_V
+    steps = np.abs(np.diff(signal_V))
+    largest = float(np.max(steps))
+    steps = steps[steps > 1e-9 * max(largest, float(np.max(np.abs(signal_V))))]
+    if steps.size < 2:
+        return 0.0
+    step = float(np.min(steps))
+    multiples = steps / step
+    whole = np.abs(multiples - np.round(multiples)) < 0.02 * np.maximum(1.0, multiples / 50)
+    return step if multiples.size > 20 and bool(np.mean(whole) > 0.99) and largest / step < 4096 else 0.0
+
+
+def u_quantised_V(sigma_V: float, step_V: float) -> float:
+    """Standard uncertainty that codes leave in a level, however many samples are averaged.
+
+    step / sqrt(12) where the noise is below a code, falling as exp(-2 pi^2 (sigma / step)^2) once noise
+    dithers it (first harmonic of the sawtooth error; Widrow and Kollar, Quantization Noise, 2008).
+    """
+    if step_V <= 0:
+        return 0.0
+    return step_V / math.sqrt(12) * math.exp(-2 * (math.pi * sigma_V / step_V) ** 2)
+
+
+def flat_noise(residuals_V: Sequence[FloatArray], *, fallback_V: float) -> Noise:
+    """Noise from what is left of the flat parts once their level is taken off.
+
+    Parameters
+    ----------
+    residuals_V : sequence of arrays, volts
+        One array for each flat part, samples in order.
+    fallback_V : float
+        Noise of one sample where the flat parts are too short to tell.
+    """
+    parts = [part - np.mean(part) for part in residuals_V if part.size >= 4]
+    n_flat = int(sum(part.size for part in parts))
+    if n_flat < 8:
+        return Noise(sigma_V=fallback_V, correlation=np.ones(1), n_flat=n_flat)
+    sums = np.zeros(LONGEST_LAG)
+    counts = np.zeros(LONGEST_LAG)
+    for part in parts:
+        _add_lagged_products(part, sums, counts)
+    variance = sums[0] / max(n_flat - len(parts), 1)
+    if not variance > 0:
+        return Noise(sigma_V=0.0, correlation=np.ones(1), n_flat=n_flat)
+    rho = np.divide(sums, np.maximum(counts, 1)) / (sums[0] / counts[0])
+    return Noise(sigma_V=float(np.sqrt(variance)), correlation=_cut(rho, counts), n_flat=n_flat)
+
+
+def _add_lagged_products(part: FloatArray, sums: FloatArray, counts: FloatArray) -> None:
+    """Add the lagged products of one flat part; the transform does all lags at once."""
+    m = min(LONGEST_LAG, part.size)
+    size = 1 << int(part.size + m - 1).bit_length()
+    spectrum = np.fft.rfft(part, size)
+    sums[:m] += np.fft.irfft(spectrum.real**2 + spectrum.imag**2, size)[:m]
+    counts[:m] += part.size - np.arange(m)
+
+
+def _cut(rho: FloatArray, counts: FloatArray) -> FloatArray:
+    """Keep the correlation up to where it first drowns in its own scatter, 2 / sqrt(count)."""
+    usable = counts > 0.5 * counts[0]
+    drowned = np.flatnonzero((np.abs(rho) < 2 / np.sqrt(np.maximum(counts, 1))) | ~usable)
+    end = int(drowned[0]) if drowned.size else rho.size
+    return np.ascontiguousarray(rho[: max(end, 1)])
