@@ -2,26 +2,32 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from darkedge.analysis.captures import Record
+from darkedge.analysis.captures import FloatArray, Record
+from darkedge.analysis.waveform.crossings import locate_crossings
 from darkedge.analysis.waveform.edges import (
     TEN_NINETY,
     Changes,
     Transitions,
     find_changes,
-    locate_crossings,
     rough_crossings,
     smoothing_length,
 )
 from darkedge.analysis.waveform.levels import StateLevels, histogram_levels
 from darkedge.analysis.waveform.noise import Noise, code_step_V, difference_sigma
-from darkedge.analysis.waveform.plateaus import Plateau, refine_levels
+from darkedge.analysis.waveform.plateaus import Plateau, Refined, refine_levels
 
 LEAST_SIGNAL_TO_NOISE = 4.0
 """Amplitude over noise below which no pulse is claimed."""
+
+LEAST_CODES = 2.0
+"""Amplitude in codes of the digitiser below which no pulse is claimed."""
+
+LEVEL_SHIFT_RATIO = 2e-3
+"""A change of a level by more than this share of the amplitude moves the plateaus enough to look at them again."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -48,41 +54,77 @@ def measure_channel(
     ----------
     record : Waveform or TimedRecord
     fractions : tuple
-        Reference levels as progress, rising; the first and the last bound the edge's time.
+        Reference levels as progress, rising; the first and the last bound the edge's time, the middle one the delays.
     volts_per_code : float, optional
         Voltage of one code of the digitiser.
+
+    References
+    ----------
+    IEEE Std 181-2011: state levels (5.2), reference level instants and transition durations (5.3).
     """
     signal, time = record.signal_V, record.time_s
-    noise_V = difference_sigma(signal)
     step = code_step_V(signal, volts_per_code)
-    levels = histogram_levels(signal)
-    if levels is None:
+    noise_V = difference_sigma(signal)
+    first = _first_look(signal, noise_V)
+    if first is None:
         return None
-    smooth = smoothing_length(noise_V, levels.amplitude_V, signal.size)
-    if smooth > 1:
-        levels = histogram_levels(signal, smooth=smooth)
-        if levels is None:
-            return None
-    changes = find_changes(signal, levels, smooth=smooth)
-    if changes.index.size == 0:
+    levels, changes = first
+    refined = _refined(time, signal, levels, changes, noise_V, step)
+    if refined is None or not _settled_somewhere(refined, changes):
         return None
-    for _ in range(2):
-        crossings = rough_crossings(time, signal, levels, changes, TEN_NINETY)
-        levels, noise, low, high = refine_levels(
-            time, signal, levels=levels, changes=changes, crossings_s=crossings, noise_V=noise_V, step_V=step
-        )
-        if levels.amplitude_V < max(LEAST_SIGNAL_TO_NOISE * max(noise.sigma_V, noise_V), 2 * step):
-            return None
     transitions = locate_crossings(
-        time, signal, levels=levels, changes=changes, noise=_with_codes(noise, step), fractions=fractions
+        time,
+        signal,
+        levels=refined.levels,
+        changes=changes,
+        noise=_with_codes(refined.noise, step),
+        fractions=fractions,
     )
     return Channel(
-        levels=levels, noise=noise, transitions=transitions, changes=changes, low=low, high=high, step_V=step,
-        start_s=float(time[0]), end_s=float(time[-1]),
+        levels=refined.levels, noise=refined.noise, transitions=transitions, changes=changes, low=refined.low,
+        high=refined.high, step_V=step, start_s=float(time[0]), end_s=float(time[-1]),
     )  # fmt: skip
+
+
+def _first_look(signal_V: FloatArray, noise_V: float) -> tuple[StateLevels, Changes] | None:
+    """Levels by histogram and the changes of state between them, the record smoothed as far as its noise asks."""
+    levels = histogram_levels(signal_V)
+    if levels is None:
+        return None
+    smooth = smoothing_length(noise_V, levels.amplitude_V, signal_V.size)
+    if smooth > 1:
+        levels = histogram_levels(signal_V, smooth=smooth)
+        if levels is None:
+            return None
+    changes = find_changes(signal_V, levels, smooth=smooth)
+    return (levels, changes) if changes.index.size else None
+
+
+def _refined(
+    time_s: FloatArray, signal_V: FloatArray, levels: StateLevels, changes: Changes, noise_V: float, step_V: float
+) -> Refined | None:
+    """Refine the levels, once more where they moved; `None` where the amplitude does not stand out."""
+    for _ in range(3):
+        crossings = rough_crossings(time_s, signal_V, levels=levels, changes=changes)
+        refined = refine_levels(
+            time_s, signal_V, levels=levels, changes=changes, crossings_s=crossings, noise_V=noise_V, step_V=step_V
+        )
+        new = refined.levels
+        noise_V = max(refined.noise.sigma_V, noise_V) if not refined.noise.known else refined.noise.sigma_V
+        if new.amplitude_V < max(LEAST_SIGNAL_TO_NOISE * noise_V, LEAST_CODES * step_V) or new.amplitude_V <= 0:
+            return None
+        moved = max(abs(new.low_V - levels.low_V), abs(new.high_V - levels.high_V))
+        levels = new
+        if moved < LEVEL_SHIFT_RATIO * new.amplitude_V:
+            break
+    return refined
+
+
+def _settled_somewhere(refined: Refined, changes: Changes) -> bool:
+    """A lone edge between two states neither of which settles is a drift, not a pulse."""
+    return changes.index.size > 1 or refined.low.settled or refined.high.settled
 
 
 def _with_codes(noise: Noise, step_V: float) -> Noise:
     """Noise of a sample on an edge, which is never less than the rounding to codes, step / sqrt(12)."""
-    sigma = max(noise.sigma_V, step_V / float(np.sqrt(12)))
-    return Noise(sigma_V=sigma, correlation=noise.correlation, n_flat=noise.n_flat)
+    return replace(noise, sigma_V=max(noise.sigma_V, step_V / float(np.sqrt(12))))

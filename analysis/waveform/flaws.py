@@ -6,7 +6,7 @@ import numpy as np
 
 from darkedge.analysis.captures import FloatArray
 from darkedge.analysis.waveform.channel import Channel
-from darkedge.analysis.waveform.edges import FEW_ON_EDGE
+from darkedge.analysis.waveform.edges import FEW_ON_EDGE, ONE_POLE_SKEW
 from darkedge.analysis.waveform.plateaus import Plateau
 
 OVERSHOOT_RATIO = 0.05
@@ -14,9 +14,6 @@ OVERSHOOT_RATIO = 0.05
 
 DROOP_RATIO = 0.01
 """Slope of a plateau from end to end, over the amplitude, that is called droop (common practice, no source)."""
-
-ONE_POLE_SKEW = float(np.log(5) / np.log(1.8))
-"""Time from 50 % to 90 % over that from 10 % to 50 % of a one-pole edge, 2.74; slower tails have more."""
 
 TAIL_EXCESS = 1.15
 
@@ -80,7 +77,7 @@ def is_min_max(signal_V: FloatArray) -> bool:
 
 
 def _droops(plateau: Plateau) -> bool:
-    return abs(plateau.slope_ratio) > max(DROOP_RATIO, 5 * plateau.u_slope_ratio)
+    return plateau.sag_ratio > max(DROOP_RATIO, 5 * plateau.u_sag_ratio)
 
 
 def rings(signal_V: FloatArray, time_s: FloatArray, channel: Channel) -> bool:

@@ -94,10 +94,22 @@ def instants(transitions: Transitions, which: IntArray, column: int, *, channel:
     channel : int
         `OUTPUT` or `DRIVE`.
     """
-    fraction = transitions.fractions[column]
-    slope = transitions.slope_V_per_s[which, column]
-    to_high = np.where(transitions.rising[which], fraction, 1.0 - fraction)
     pull = np.zeros((which.size, 4))
-    pull[:, 2 * channel] = (1.0 - to_high) / slope
-    pull[:, 2 * channel + 1] = to_high / slope
+    pull[:, 2 * channel : 2 * channel + 2] = transitions.pull_s_per_V[which, column]
     return Instants(time_s=transitions.time_s[which, column], u_s=transitions.u_time_s[which, column], pull=pull)
+
+
+def durations(transitions: Transitions, which: IntArray) -> Instants:
+    """Times from the first to the last reference level of some edges of the output, as `Instants` hold them.
+
+    The two crossings of one edge share samples; their covariance is taken along.
+    """
+    covariance = transitions.covariance_s2[which]
+    variance = covariance[:, 0, 0] + covariance[:, -1, -1] - 2 * covariance[:, 0, -1]
+    pull = np.zeros((which.size, 4))
+    pull[:, :2] = transitions.pull_s_per_V[which, -1] - transitions.pull_s_per_V[which, 0]
+    return Instants(
+        time_s=transitions.time_s[which, -1] - transitions.time_s[which, 0],
+        u_s=np.sqrt(np.maximum(variance, 0.0)),
+        pull=pull,
+    )

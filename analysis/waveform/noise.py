@@ -18,6 +18,9 @@ ENOUGH_FLAT_SAMPLES = 30
 
 LONGEST_LAG = 256
 
+FEWEST_CODES, MOST_CODES = 4, 65536
+"""Largest step of a record, in smallest steps, between which the smallest step is taken for a code."""
+
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Noise:
@@ -89,7 +92,8 @@ def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:
     step = float(np.min(steps))
     multiples = steps / step
     whole = np.abs(multiples - np.round(multiples)) < 0.02 * np.maximum(1.0, multiples / 50)
-    return step if multiples.size > 20 and bool(np.mean(whole) > 0.99) and largest / step < 4096 else 0.0
+    plausible = FEWEST_CODES <= largest / step < MOST_CODES and multiples.size > 20
+    return step if plausible and bool(np.mean(whole) > 0.99) else 0.0
 
 
 def u_quantised_V(sigma_V: float, step_V: float) -> float:

@@ -11,7 +11,7 @@ from darkedge.analysis.captures import FloatArray
 from darkedge.analysis.measurement import Estimate
 from darkedge.analysis.waveform.channel import Channel
 from darkedge.analysis.waveform.edges import IntArray, Transitions
-from darkedge.analysis.waveform.intervals import DRIVE, Budget, Instants, Interval, instants
+from darkedge.analysis.waveform.intervals import DRIVE, Budget, Instants, Interval, durations, instants
 
 LEAST_PULSES_FOR_JITTER = 3
 
@@ -113,8 +113,7 @@ def time_edges(transitions: Transitions, which: IntArray, *, budget: Budget) -> 
     for name, rising in (("rise_time_s", True), ("fall_time_s", False)):
         edges = which[transitions.rising[which] == rising]
         if edges.size:
-            late = instants(transitions, edges, len(transitions.fractions) - 1)
-            found[name] = budget.estimate(late.since(instants(transitions, edges, 0)).mean())
+            found[name] = budget.estimate(durations(transitions, edges).mean())
     return found
 
 

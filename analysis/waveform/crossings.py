@@ -1,0 +1,406 @@
+"""Crossings: when each edge passes the reference levels, as well as the noise allows, and how well that is.
+
+A shape is fitted to each edge (`shapes`), and what it leaves is looked at. Where that is no more than noise, the
+shape's own crossings stand. Else a local polynomial through the residuals about each crossing is added to the shape, so
+that the result is that of the trace whatever the edge looks like; the shape then only takes away the curvature
+and the corner that a polynomial alone would blur (Hjort and Glad, Annals of Statistics 23, 882, 1995).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy.linalg import toeplitz
+
+from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.waveform.edges import (
+    TEN_NINETY,
+    BoolArray,
+    Changes,
+    IntArray,
+    Transitions,
+    onsets,
+    rough_crossings,
+)
+from darkedge.analysis.waveform.levels import StateLevels
+from darkedge.analysis.waveform.noise import Noise
+from darkedge.analysis.waveform.shapes import EdgeShapes, fit_shapes
+
+ENOUGH_TO_FIT = 4
+"""Samples between 10 and 90 % from which a shape of three parameters is worth more than a straight line."""
+
+BINS = 128
+"""Most samples an edge is fitted on; more are meaned in groups, each far shorter than the edge."""
+
+BEFORE, AFTER = 0.8, 1.2
+"""How far the fit reaches before 10 % and after 90 %, in edge times: 3 sigma of a Gaussian, 5 tau of one pole."""
+
+REACHES = (0.05, 0.1, 0.2, 0.35)
+"""Half widths of the windows of the local polynomial, in edge times."""
+
+LEAST_IN_WINDOW = 5
+"""Entries that a local quadratic needs to have any say over the straight line between two."""
+
+FARTHEST_MOVE = 0.6
+"""How far a crossing may end from where it was roughly found, in edge times; farther, the fit has gone astray."""
+
+CHECK_BINS = 10
+"""Parts into which residuals are lumped to see whether a shape fits."""
+
+CUT_SHORT_RATIO = 4.5
+"""Times its 50 to 90 % time after the 50 % point, eight time constants: an edge that ends sooner has its asymptote
+fitted too."""
+
+
+def locate_crossings(
+    time_s: FloatArray,
+    signal_V: FloatArray,
+    *,
+    levels: StateLevels,
+    changes: Changes,
+    noise: Noise,
+    fractions: tuple[float, ...] = TEN_NINETY,
+) -> Transitions:
+    """Instants at which each edge passes the reference levels, with their uncertainty.
+
+    Edges with fewer than four samples are interpolated in a straight line between the two samples that straddle
+    a level.
+
+    Parameters
+    ----------
+    time_s, signal_V : arrays, shape (n,), seconds and volts
+    fractions : tuple
+        Reference levels as progress, rising, between 0 and 1.
+
+    References
+    ----------
+    IEEE Std 181-2011, 5.3, reference level instants.
+    """
+    rough = rough_crossings(time_s, signal_V, levels=levels, changes=changes)
+    straight = _straight_lines(
+        time_s, signal_V, levels=levels, changes=changes, noise=noise, fractions=fractions, rough_s=rough
+    )
+    enough = (straight.n_samples >= ENOUGH_TO_FIT) & np.all(np.diff(rough, axis=1) > 0, axis=1)
+    if not bool(np.any(enough)):
+        return straight
+    pieces = _cut_out(time_s, signal_V, levels=levels, changes=changes, rough_s=rough, which=np.flatnonzero(enough))
+    return _located(pieces, straight, levels=levels, noise=noise)
+
+
+def _straight_lines(
+    time_s: FloatArray,
+    signal_V: FloatArray,
+    *,
+    levels: StateLevels,
+    changes: Changes,
+    noise: Noise,
+    fractions: tuple[float, ...],
+    rough_s: FloatArray,
+) -> Transitions:
+    """Crossings interpolated between two samples, for edges too fast for more."""
+    crossings = rough_s
+    if fractions != TEN_NINETY:
+        crossings = rough_crossings(time_s, signal_V, levels=levels, changes=changes, fractions=fractions)
+    after = np.clip(np.searchsorted(time_s, crossings), 1, time_s.size - 1)
+    step_s = time_s[after] - time_s[after - 1]
+    slope = (signal_V[after] - signal_V[after - 1]) / step_s
+    least = 0.05 * levels.amplitude_V / step_s
+    sign = np.where(changes.rising, 1.0, -1.0)[:, None]
+    slope = np.where(slope * sign > least, slope, sign * least)
+    n_samples = np.searchsorted(time_s, rough_s[:, 2]) - np.searchsorted(time_s, rough_s[:, 0])
+    # Between two samples the true edge may bend: anywhere in the step if it is all there is, less with more samples.
+    bend = step_s / np.sqrt(12) / np.maximum(n_samples, 1)[:, None]
+    variance = (noise.sigma_V / slope) ** 2 + bend**2
+    to_high = np.where(changes.rising[:, None], fractions, 1.0 - np.asarray(fractions))
+    return Transitions(
+        fractions=fractions, rising=changes.rising, time_s=crossings,
+        covariance_s2=variance[:, :, None] * np.eye(len(fractions)),
+        pull_s_per_V=np.stack(((1.0 - to_high) / slope, to_high / slope), axis=2),
+        n_samples=np.asarray(n_samples, dtype=np.intp), by_shape=np.zeros(changes.index.size, dtype=np.bool_),
+    )  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Pieces:
+    """Edges cut out of a record, one row each, in their own units.
+
+    x is time since `origin_s` in `unit_s`, the edge's own 10 to 90 % time. An edge that bends later than it starts is
+    `mirrored`: time and progress run backwards, so that its sharp end comes first like that of one pole. `x`,
+    `progress` and `weight` have shape (n, m), padded with weight 0; `group` (n,) is how many samples each entry is
+    the mean of.
+    """
+
+    which: IntArray
+    rising: BoolArray
+    mirrored: BoolArray
+    cut_short: BoolArray
+    origin_s: FloatArray
+    unit_s: FloatArray
+    quarter: FloatArray
+    x: FloatArray
+    progress: FloatArray
+    weight: FloatArray
+    group: IntArray
+
+
+def _cut_out(
+    time_s: FloatArray,
+    signal_V: FloatArray,
+    *,
+    levels: StateLevels,
+    changes: Changes,
+    rough_s: FloatArray,
+    which: IntArray,
+) -> _Pieces:
+    start_s, stop_s, cut_short = _reach(time_s, rough_s)
+    rough, rising = rough_s[which], changes.rising[which]
+    first = np.searchsorted(time_s, start_s[which])
+    length = np.searchsorted(time_s, stop_s[which], side="right") - first
+    group = np.maximum(1, -(-length // BINS))
+    entries = length // group
+    place = np.arange(int(np.max(entries)))
+    inside = place < entries[:, None]
+    begin = first[:, None] + group[:, None] * np.where(inside, place, 0)
+    end = begin + group[:, None]
+    upward = (_group_means(signal_V, begin, end) - levels.low_V) / levels.amplitude_V
+    origin, unit = rough[:, 1], rough[:, 2] - rough[:, 0]
+    x = (_group_means(time_s, begin, end) - origin[:, None]) / unit[:, None]
+    progress = np.where(rising[:, None], upward, 1.0 - upward)
+    quarter = (rough - origin[:, None]) / unit[:, None]
+    short = cut_short[which]
+    mirrored = (quarter[:, 2] < -0.9 * quarter[:, 0]) & ~short
+    flip = mirrored[:, None]
+    return _Pieces(
+        which=which, rising=rising, mirrored=mirrored, cut_short=short, origin_s=origin, unit_s=unit,
+        quarter=np.where(flip, -quarter[:, ::-1], quarter), x=np.where(flip, -x, x),
+        progress=np.where(flip, 1.0 - progress, progress), weight=inside.astype(np.float64),
+        group=np.asarray(group, dtype=np.intp),
+    )  # fmt: skip
+
+
+def _reach(time_s: FloatArray, rough_s: FloatArray) -> tuple[FloatArray, FloatArray, BoolArray]:
+    """From when to when each edge is fitted, clear of its neighbours, and whether it is cut short by the next."""
+    unit = rough_s[:, 2] - rough_s[:, 0]
+    onset = onsets(rough_s)
+    late = rough_s[:, 2] - rough_s[:, 1]
+    before = rough_s[:, 0] - BEFORE * unit
+    # The tail of the edge before must have died down: four times its 50 to 90 % time, 6.4 time constants.
+    settled = np.concatenate(([-np.inf], (rough_s[:, 1] + 4 * late)[:-1]))
+    start = np.minimum(np.maximum(before, settled), onset)
+    start = np.maximum(start, np.concatenate(([time_s[0]], rough_s[:-1, 2])))
+    next_onset = np.concatenate((onset[1:], [time_s[-1]]))
+    stop = np.maximum(np.minimum(rough_s[:, 2] + AFTER * unit, next_onset), rough_s[:, 2])
+    return start, stop, next_onset - rough_s[:, 1] < CUT_SHORT_RATIO * late
+
+
+def _group_means(values: FloatArray, begin: IntArray, end: IntArray) -> FloatArray:
+    """Means of values[begin:end], for arrays of begins and ends."""
+    offset = values[0]
+    sums = np.concatenate(([0.0], np.cumsum(values - offset)))
+    return np.asarray((sums[end] - sums[begin]) / (end - begin) + offset)
+
+
+def _located(pieces: _Pieces, straight: Transitions, *, levels: StateLevels, noise: Noise) -> Transitions:
+    """Fit, check, correct; put the result in place of the straight lines wherever the fit ended well."""
+    sigma = noise.sigma_V / levels.amplitude_V
+    u_level = max(levels.u_low_V, levels.u_high_V) / levels.amplitude_V
+    shapes = fit_shapes(pieces.x, pieces.progress, pieces.weight, quarter=pieces.quarter, cut_short=pieces.cut_short)
+    fractions = np.asarray(straight.fractions)
+    wanted = np.where(pieces.mirrored[:, None], 1.0 - fractions, fractions)
+    x, gain = shapes.crossings(wanted)
+    corrected = np.zeros(pieces.which.size, dtype=np.bool_)
+    for rising in (True, False):
+        group = np.flatnonzero(pieces.rising == rising)
+        if group.size and not _fits(pieces, shapes, group, sigma=sigma, u_level=u_level, noise=noise):
+            x[group], gain[group] = _corrected(pieces, shapes, group, wanted, x, sigma=sigma, noise=noise)
+            corrected[group] = True
+    return _put_back(pieces, straight, x, gain, levels=levels, noise=noise, corrected=corrected, good=shapes.good)
+
+
+def _fits(pieces: _Pieces, shapes: EdgeShapes, group: IntArray, *, sigma: float, u_level: float, noise: Noise) -> bool:
+    """Whether the residuals of some edges, lumped into a few parts of the edge, are no more than noise.
+
+    Chi-squared of the lumped means about zero, against its expectation and two of its standard deviations.
+    """
+    x, residual = pieces.x[group], shapes.residual[group]
+    samples = pieces.weight[group] * pieces.group[group][:, None]
+    start, stop = -0.3 - BEFORE, 0.7 + AFTER  # where an edge's own foot and tail lie, whichever way it bends
+    samples = samples * ((x > start) & (x < stop))
+    part = np.clip((x - start) * (CHECK_BINS / (stop - start)), 0, CHECK_BINS - 1).astype(np.intp)
+    count = np.bincount(part.ravel(), samples.ravel(), minlength=CHECK_BINS)
+    sums = np.bincount(part.ravel(), (samples * residual).ravel(), minlength=CHECK_BINS)
+    used = count > 0
+    count, sums = count[used], sums[used]
+    per_edge = max(int(np.mean(count) / group.size), 1)
+    variance = sigma**2 * noise.inflation(per_edge) / count + u_level**2
+    chi2 = float(np.sum((sums / count) ** 2 / np.maximum(variance, 1e-30)))
+    dof = max(count.size - 3, 1)
+    return bool(chi2 < dof + 2 * np.sqrt(2 * dof))
+
+
+def _corrected(
+    pieces: _Pieces,
+    shapes: EdgeShapes,
+    group: IntArray,
+    wanted: FloatArray,
+    x: FloatArray,
+    *,
+    sigma: float,
+    noise: Noise,
+) -> tuple[FloatArray, FloatArray]:
+    """Crossings of shape plus local polynomial of its residuals for some edges, and their gain (see `EdgeShapes`)."""
+    part = shapes.select(group)
+    entries, weight, wanted, x = pieces.x[group], pieces.weight[group], wanted[group], x[group]
+    reach = _choose_reach(entries, weight, part.residual, x, sigma, noise, pieces.group[group])
+
+    def sum_at(place: FloatArray) -> tuple[FloatArray, FloatArray]:
+        local = _smoother(entries, weight, place, reach)
+        return part.value(place) + np.einsum("ekm,em->ek", local, part.residual), local
+
+    for _ in range(4):
+        slope = np.maximum((sum_at(x + 0.05)[0] - sum_at(x - 0.05)[0]) / 0.1, 0.02)
+        value, local = sum_at(x)
+        x = x + np.clip((wanted - value) / slope, -0.1, 0.1)
+    through_shape = np.einsum("epk,epm->ekm", part.gradient(x), part.solver)
+    through_residual = local - np.einsum("ekm,epm,epj->ekj", local, part.jacobian, part.solver)
+    return x, -(through_shape + through_residual) / slope[:, :, None]
+
+
+def _choose_reach(
+    entries: FloatArray,
+    weight: FloatArray,
+    residual: FloatArray,
+    x: FloatArray,
+    sigma: float,
+    noise: Noise,
+    group: IntArray,
+) -> FloatArray:
+    """Widest window for each level whose correction agrees with those of all narrower ones, to twice their noise.
+
+    Corrections are meaned over the edges, which share a shape. After Lepski (1991) and Goldenshluger and Nemirovski
+    (1997). Returns half widths, shape (k,); 0 is the straight line between neighbours.
+    """
+    chosen = np.zeros(x.shape[1])
+    kept: list[tuple[FloatArray, FloatArray]] = []
+    open_ = np.ones(x.shape[1], dtype=np.bool_)
+    for reach in (0.0, *REACHES):
+        inside = np.sum((np.abs(entries[:, None, :] - x[:, :, None]) <= reach) * weight[:, None, :], axis=2)
+        usable = open_ & (np.median(inside, axis=0) >= LEAST_IN_WINDOW) if reach else open_.copy()
+        if not bool(np.any(usable)):
+            continue
+        local = _smoother(entries, weight, x, np.full(x.shape[1], reach))
+        offset = np.mean(np.einsum("ekm,em->ek", local, residual), axis=0)
+        spread = np.sqrt(np.mean(_variance(local, noise, group), axis=0) / x.shape[0]) * sigma
+        for earlier, its_spread in kept:
+            agrees = np.abs(offset - earlier) <= 2 * its_spread
+            open_ &= agrees | ~usable
+            usable &= agrees
+        chosen = np.where(usable, reach, chosen)
+        kept.append((offset, spread))
+    return chosen
+
+
+def _smoother(entries: FloatArray, weight: FloatArray, x: FloatArray, reach: FloatArray) -> FloatArray:
+    """Weights of the entries in a local quadratic about each x, evaluated there; shape (n, k, m).
+
+    A window that holds too few entries gives the straight line between the two entries that straddle x.
+    """
+    distance = entries[:, None, :] - x[:, :, None]
+    inside = (np.abs(distance) <= reach[None, :, None]) * weight[:, None, :]
+    scaled = distance / np.maximum(reach, 1e-9)[None, :, None] * inside
+    design = np.stack((inside, scaled, scaled * scaled), axis=2)
+    enough = np.sum(inside, axis=2) >= LEAST_IN_WINDOW
+    normal = design @ design.transpose(0, 1, 3, 2)
+    normal = np.where(enough[:, :, None, None], normal, np.eye(3))
+    first = np.linalg.solve(normal + 1e-9 * np.eye(3), np.array([1.0, 0.0, 0.0])[:, None])[..., 0]
+    quadratic = np.einsum("ekp,ekpm->ekm", first, design)
+    return np.where(enough[:, :, None], quadratic, _straddle(distance, weight))
+
+
+def _straddle(distance: FloatArray, weight: FloatArray) -> FloatArray:
+    present = weight[:, None, :] > 0
+    below = np.where(present & (distance <= 0), distance, -np.inf)
+    above = np.where(present & (distance > 0), distance, np.inf)
+    left, right = np.argmax(below, axis=2), np.argmin(above, axis=2)
+    near = np.take_along_axis(below, left[:, :, None], 2)[:, :, 0]
+    far = np.take_along_axis(above, right[:, :, None], 2)[:, :, 0]
+    both = np.isfinite(near) & np.isfinite(far)
+    span = np.where(both, far - near, 1.0)
+    share = np.where(both, -np.where(both, near, 0.0) / span, np.where(np.isfinite(near), 0.0, 1.0))
+    weights = np.zeros_like(distance)
+    np.put_along_axis(weights, left[:, :, None], (1.0 - share)[:, :, None], 2)
+    old = np.take_along_axis(weights, right[:, :, None], 2)[:, :, 0]
+    np.put_along_axis(weights, right[:, :, None], (old + share)[:, :, None], 2)
+    return weights
+
+
+def _variance(gain: FloatArray, noise: Noise, group: IntArray) -> FloatArray:
+    """Variance of sums of entries with the given gains, in units of one sample's variance; shape (n, k)."""
+    return np.asarray(np.einsum("ekk->ek", _covariance(gain, noise, group)))
+
+
+def _covariance(gain: FloatArray, noise: Noise, group: IntArray) -> FloatArray:
+    """Covariance of sums of entries with the given gains (n, k, m), in units of one sample's variance; (n, k, k)."""
+    if noise.correlation.size == 1:
+        return (gain @ gain.transpose(0, 2, 1)) / group[:, None, None]
+    result = np.empty((gain.shape[0], gain.shape[1], gain.shape[1]))
+    for size in np.unique(group):
+        rows = group == size
+        between = toeplitz(_correlation_of_means(noise.correlation, int(size), gain.shape[2]))
+        result[rows] = gain[rows] @ between @ gain[rows].transpose(0, 2, 1)
+    return result
+
+
+def _correlation_of_means(correlation: FloatArray, size: int, n: int) -> FloatArray:
+    """Covariance of means of `size` samples at distances of 0 to n - 1 means, in units of one sample's variance."""
+    lags = np.zeros(size * (n + 1))
+    known = min(correlation.size, lags.size)
+    lags[:known] = correlation[:known]
+    offsets = np.arange(1 - size, size)
+    overlap = (size - np.abs(offsets)) / size**2
+    places = np.abs(size * np.arange(n)[:, None] + offsets)
+    return np.asarray(lags[places] @ overlap)
+
+
+def _put_back(
+    pieces: _Pieces,
+    straight: Transitions,
+    x: FloatArray,
+    gain: FloatArray,
+    *,
+    levels: StateLevels,
+    noise: Noise,
+    corrected: BoolArray,
+    good: BoolArray,
+) -> Transitions:
+    """Turn crossings in x into instants, with covariance and pull by the levels, where the fit went well."""
+    unit = pieces.unit_s
+    sense = np.where(pieces.mirrored, -1.0, 1.0)
+    time = pieces.origin_s[:, None] + (unit * sense)[:, None] * x
+    away = np.max(np.abs(time - straight.time_s[pieces.which]), axis=1)
+    kept = good & (away < FARTHEST_MOVE * unit) & np.all(np.diff(time, axis=1) > 0, axis=1)
+    rows = pieces.which[kept]
+    scale = (unit * noise.sigma_V / levels.amplitude_V) ** 2
+    covariance = _covariance(gain, noise, pieces.group) * scale[:, None, None]
+    n_samples = straight.n_samples[pieces.which]
+    bend = unit / np.sqrt(12) / np.maximum(n_samples, 1) ** 2
+    covariance += (bend**2)[:, None, None] * np.eye(x.shape[1])
+    pull = unit[:, None, None] * (gain @ _progress_by_levels(pieces)) / levels.amplitude_V
+    times, covariances, pulls = straight.time_s.copy(), straight.covariance_s2.copy(), straight.pull_s_per_V.copy()
+    times[rows], covariances[rows], pulls[rows] = time[kept], covariance[kept], pull[kept]
+    by_shape = straight.by_shape.copy()
+    by_shape[rows] = ~corrected[kept]
+    return replace(straight, time_s=times, covariance_s2=covariances, pull_s_per_V=pulls, by_shape=by_shape)
+
+
+def _progress_by_levels(pieces: _Pieces) -> FloatArray:
+    """Derivative of each entry's progress by the low and the high level, times the amplitude; shape (n, m, 2).
+
+    From progress = (v - low) / (high - low) going up and (high - v) / (high - low) going down. Mirrored
+    edges hold one minus the progress on a reversed axis: both signs turn, and the shift in time stays.
+    """
+    progress = np.where(pieces.mirrored[:, None], 1.0 - pieces.progress, pieces.progress)
+    up = np.stack((progress - 1.0, -progress), axis=2)
+    down = np.stack((progress, 1.0 - progress), axis=2)
+    return np.where(pieces.rising[:, None, None], up, down)
