@@ -1,0 +1,1 @@
+"""Instruments in software, behind real SCPI sockets on loopback."""

@@ -1,0 +1,92 @@
+"""A raw SCPI socket: one instrument on a loopback TCP port, one message a line."""
+
+from __future__ import annotations
+
+import socket
+import socketserver
+import threading
+from types import TracebackType
+
+from darkedge.instruments.virtual.errors import ScpiError
+from darkedge.instruments.virtual.instrument import ScpiInstrument
+
+LINE_LIMIT = 1 << 20
+"""Longest program message taken; a longer one is dropped with -363."""
+
+
+class _Handler(socketserver.StreamRequestHandler):
+    server: _Server
+
+    def handle(self) -> None:
+        self.request.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+        while True:
+            try:
+                line = self.rfile.readline(LINE_LIMIT)
+            except OSError:
+                return
+            if not line:
+                return
+            if not line.endswith(b"\n") and len(line) >= LINE_LIMIT:
+                self._drop_rest()
+                with self.server.turn:
+                    self.server.instrument.status.report(ScpiError(-363))
+                continue
+            with self.server.turn:
+                reply = self.server.instrument.carry_out(line.decode("latin-1").strip("\r\n"))
+            try:
+                self.wfile.write(reply)
+            except OSError:
+                return
+
+    def _drop_rest(self) -> None:
+        while True:
+            more = self.rfile.readline(LINE_LIMIT)
+            if not more or more.endswith(b"\n"):
+                return
+
+
+class _Server(socketserver.ThreadingTCPServer):
+    allow_reuse_address = True
+    daemon_threads = True
+
+    def __init__(self, instrument: ScpiInstrument, port: int) -> None:
+        self.instrument = instrument
+        self.turn = threading.Lock()
+        super().__init__(("127.0.0.1", port), _Handler)
+
+
+class InstrumentServer:
+    """Serves one instrument on loopback until it is closed; a context manager.
+
+    Messages of several clients are carried out one at a time.
+    """
+
+    def __init__(self, instrument: ScpiInstrument, *, port: int = 0) -> None:
+        self.instrument = instrument
+        self._server = _Server(instrument, port)
+        self._thread = threading.Thread(target=self._server.serve_forever, kwargs={"poll_interval": 0.05}, daemon=True)
+        self._thread.start()
+
+    @property
+    def port(self) -> int:
+        """TCP port on 127.0.0.1."""
+        return int(self._server.server_address[1])
+
+    @property
+    def address(self) -> str:
+        """VISA resource name of the socket."""
+        return f"TCPIP::127.0.0.1::{self.port}::SOCKET"
+
+    def close(self) -> None:
+        """Stop serving."""
+        self._server.shutdown()
+        self._server.server_close()
+        self._thread.join(timeout=2)
+
+    def __enter__(self) -> InstrumentServer:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
