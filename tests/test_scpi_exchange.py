@@ -121,9 +121,12 @@ def test_identity_has_four_fields(lamp: Lamp) -> None:
 
 
 def test_a_plain_tcp_client_gets_sensible_answers() -> None:
-    with InstrumentServer(Lamp()) as server, socket.create_connection(("127.0.0.1", server.port), timeout=5) as client:
-        with client.makefile("rwb") as lines:
-            lines.write(b"*CLS\nTRIG:LEV 2.5 V\r\nTRIG:LEV?\nJUNK\nSYST:ERR?\n")
-            lines.flush()
-            assert lines.readline() == b"2.5\n"
-            assert lines.readline().startswith(b'-113,"Undefined header')
+    with (
+        InstrumentServer(Lamp()) as server,
+        socket.create_connection(("127.0.0.1", server.port), timeout=5) as client,
+        client.makefile("rwb") as lines,
+    ):
+        lines.write(b"*CLS\nTRIG:LEV 2.5 V\r\nTRIG:LEV?\nJUNK\nSYST:ERR?\n")
+        lines.flush()
+        assert lines.readline() == b"2.5\n"
+        assert lines.readline().startswith(b'-113,"Undefined header')
