@@ -201,6 +201,21 @@ def _group_means(values: FloatArray, begin: IntArray, end: IntArray) -> FloatArr
     return np.asarray((sums[end] - sums[begin]) / (end - begin) + offset)
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Fine:
+    """Crossings in x, shape (n, k), and what is known of them.
+
+    `gain` (n, k, m): how far an error of each entry's progress moves them; `doubt` (n, k): bias that may be left;
+    `corrected` and `good` (n,): whether the shape was corrected, and whether its fit ended well.
+    """
+
+    x: FloatArray
+    gain: FloatArray
+    doubt: FloatArray
+    corrected: BoolArray
+    good: BoolArray
+
+
 def _located(pieces: _Pieces, straight: Transitions, *, levels: StateLevels, noise: Noise) -> Transitions:
     """Fit, check, correct; put the result in place of the straight lines wherever the fit ended well."""
     sigma = noise.sigma_V / levels.amplitude_V
@@ -209,13 +224,15 @@ def _located(pieces: _Pieces, straight: Transitions, *, levels: StateLevels, noi
     fractions = np.asarray(straight.fractions)
     wanted = np.where(pieces.mirrored[:, None], 1.0 - fractions, fractions)
     x, gain = shapes.crossings(wanted)
+    doubt = np.zeros_like(x)
     corrected = np.zeros(pieces.which.size, dtype=np.bool_)
     for rising in (True, False):
         group = np.flatnonzero(pieces.rising == rising)
         if group.size and not _fits(pieces, shapes, group, sigma=sigma, u_level=u_level, noise=noise):
-            x[group], gain[group] = _corrected(pieces, shapes, group, wanted, x, sigma=sigma, noise=noise)
+            x[group], gain[group], doubt[group] = _corrected(pieces, shapes, group, wanted, x, sigma=sigma, noise=noise)
             corrected[group] = True
-    return _put_back(pieces, straight, x, gain, levels=levels, noise=noise, corrected=corrected, good=shapes.good)
+    fine = _Fine(x=x, gain=gain, doubt=doubt, corrected=corrected, good=shapes.good)
+    return _put_back(pieces, straight, fine, levels=levels, noise=noise)
 
 
 def _fits(pieces: _Pieces, shapes: EdgeShapes, group: IntArray, *, sigma: float, u_level: float, noise: Noise) -> bool:
@@ -248,11 +265,11 @@ def _corrected(
     *,
     sigma: float,
     noise: Noise,
-) -> tuple[FloatArray, FloatArray]:
-    """Crossings of shape plus local polynomial of its residuals for some edges, and their gain (see `EdgeShapes`)."""
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Crossings of shape plus local polynomial of its residuals for some edges: x, gain and doubt of `_Fine`."""
     part = shapes.select(group)
     entries, weight, wanted, x = pieces.x[group], pieces.weight[group], wanted[group], x[group]
-    reach = _choose_reach(entries, weight, part.residual, x, sigma, noise, pieces.group[group])
+    reach, doubt = _choose_reach(entries, weight, part.residual, x, sigma, noise, pieces.group[group])
 
     def sum_at(place: FloatArray) -> tuple[FloatArray, FloatArray]:
         local = _smoother(entries, weight, place, reach)
@@ -264,7 +281,7 @@ def _corrected(
         x = x + np.clip((wanted - value) / slope, -0.1, 0.1)
     through_shape = np.einsum("epk,epm->ekm", part.gradient(x), part.solver)
     through_residual = local - np.einsum("ekm,epm,epj->ekj", local, part.jacobian, part.solver)
-    return x, -(through_shape + through_residual) / slope[:, :, None]
+    return x, -(through_shape + through_residual) / slope[:, :, None], doubt / slope
 
 
 def _choose_reach(
@@ -275,13 +292,14 @@ def _choose_reach(
     sigma: float,
     noise: Noise,
     group: IntArray,
-) -> FloatArray:
+) -> tuple[FloatArray, FloatArray]:
     """Widest window for each level whose correction agrees with those of all narrower ones, to twice their noise.
 
     Corrections are meaned over the edges, which share a shape. After Lepski (1991) and Goldenshluger and Nemirovski
-    (1997). Returns half widths, shape (k,); 0 is the straight line between neighbours.
+    (1997). Returns half widths, shape (k,), where 0 is the straight line between neighbours; and, in progress, by how
+    much more than noise the chosen correction differs from the next narrower one's, which is bias that may be left.
     """
-    chosen = np.zeros(x.shape[1])
+    chosen, doubt = np.zeros(x.shape[1]), np.zeros(x.shape[1])
     kept: list[tuple[FloatArray, FloatArray]] = []
     open_ = np.ones(x.shape[1], dtype=np.bool_)
     for reach in (0.0, *REACHES):
@@ -296,9 +314,12 @@ def _choose_reach(
             agrees = np.abs(offset - earlier) <= 2 * its_spread
             open_ &= agrees | ~usable
             usable &= agrees
+        if kept:
+            excess = (offset - kept[-1][0]) ** 2 - (kept[-1][1] ** 2 - spread**2)
+            doubt = np.where(usable, np.sqrt(np.maximum(excess, 0.0)), doubt)
         chosen = np.where(usable, reach, chosen)
         kept.append((offset, spread))
-    return chosen
+    return chosen, doubt
 
 
 def _smoother(entries: FloatArray, weight: FloatArray, x: FloatArray, reach: FloatArray) -> FloatArray:
@@ -314,7 +335,9 @@ def _smoother(entries: FloatArray, weight: FloatArray, x: FloatArray, reach: Flo
     normal = design @ design.transpose(0, 1, 3, 2)
     normal = np.where(enough[:, :, None, None], normal, np.eye(3))
     first = np.linalg.solve(normal + 1e-9 * np.eye(3), np.array([1.0, 0.0, 0.0])[:, None])[..., 0]
-    quadratic = np.einsum("ekp,ekpm->ekm", first, design)
+    quadratic = np.asarray(np.einsum("ekp,ekpm->ekm", first, design))
+    if bool(np.all(enough)):
+        return quadratic
     return np.where(enough[:, :, None], quadratic, _straddle(distance, weight))
 
 
@@ -366,31 +389,28 @@ def _correlation_of_means(correlation: FloatArray, size: int, n: int) -> FloatAr
 def _put_back(
     pieces: _Pieces,
     straight: Transitions,
-    x: FloatArray,
-    gain: FloatArray,
+    fine: _Fine,
     *,
     levels: StateLevels,
     noise: Noise,
-    corrected: BoolArray,
-    good: BoolArray,
 ) -> Transitions:
     """Turn crossings in x into instants, with covariance and pull by the levels, where the fit went well."""
-    unit = pieces.unit_s
+    unit, x = pieces.unit_s, fine.x
     sense = np.where(pieces.mirrored, -1.0, 1.0)
     time = pieces.origin_s[:, None] + (unit * sense)[:, None] * x
     away = np.max(np.abs(time - straight.time_s[pieces.which]), axis=1)
-    kept = good & (away < FARTHEST_MOVE * unit) & np.all(np.diff(time, axis=1) > 0, axis=1)
+    kept = fine.good & (away < FARTHEST_MOVE * unit) & np.all(np.diff(time, axis=1) > 0, axis=1)
     rows = pieces.which[kept]
     scale = (unit * noise.sigma_V / levels.amplitude_V) ** 2
-    covariance = _covariance(gain, noise, pieces.group) * scale[:, None, None]
+    covariance = _covariance(fine.gain, noise, pieces.group) * scale[:, None, None]
     n_samples = straight.n_samples[pieces.which]
     bend = unit / np.sqrt(12) / np.maximum(n_samples, 1) ** 2
-    covariance += (bend**2)[:, None, None] * np.eye(x.shape[1])
-    pull = unit[:, None, None] * (gain @ _progress_by_levels(pieces)) / levels.amplitude_V
+    covariance += ((unit[:, None] * fine.doubt) ** 2 + (bend**2)[:, None])[:, :, None] * np.eye(x.shape[1])
+    pull = unit[:, None, None] * (fine.gain @ _progress_by_levels(pieces)) / levels.amplitude_V
     times, covariances, pulls = straight.time_s.copy(), straight.covariance_s2.copy(), straight.pull_s_per_V.copy()
     times[rows], covariances[rows], pulls[rows] = time[kept], covariance[kept], pull[kept]
     by_shape = straight.by_shape.copy()
-    by_shape[rows] = ~corrected[kept]
+    by_shape[rows] = ~fine.corrected[kept]
     return replace(straight, time_s=times, covariance_s2=covariances, pull_s_per_V=pulls, by_shape=by_shape)
 
 

@@ -90,7 +90,10 @@ def _measure_element(
             capture=capture.name, element=element, conditions=conditions, flags=(*flags, "no_pulse"), levels=LEVELS,
             estimator=ESTIMATOR, n_pulses=0,
         )  # fmt: skip
-    job = _Job(record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive)
+    pairing = pair_edges(drive.transitions, channel.transitions, end_s=channel.end_s) if drive is not None else None
+    job = _Job(
+        record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive, pairing=pairing
+    )  # fmt: skip
     quantities = job.levels() | job.times()
     flags |= job.flags(quantities)
     return Measurement(
@@ -108,12 +111,7 @@ class _Job:
     fixture: Fixture
     channel: Channel
     drive: Channel | None
-
-    @property
-    def pairing(self) -> Pairing | None:
-        if self.drive is None:
-            return None
-        return pair_edges(self.drive.transitions, self.channel.transitions, end_s=self.channel.end_s)
+    pairing: Pairing | None
 
     def edges(self) -> IntArray:
         """Output edges that count: those that answer the drive, all of them where there is none."""

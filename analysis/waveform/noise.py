@@ -142,8 +142,8 @@ def _add_lagged_products(part: FloatArray, sums: FloatArray, counts: FloatArray)
 
 
 def _cut(rho: FloatArray, counts: FloatArray) -> FloatArray:
-    """Keep the correlation up to where it first drowns in its own scatter, 2 / sqrt(count)."""
+    """Keep the correlation up to where it first drowns in its own scatter, 1 / sqrt(count)."""
     usable = counts > 0.5 * counts[0]
-    drowned = np.flatnonzero((np.abs(rho) < 2 / np.sqrt(np.maximum(counts, 1))) | ~usable)
+    drowned = np.flatnonzero((np.abs(rho) < 1 / np.sqrt(np.maximum(counts, 1))) | ~usable)
     end = int(drowned[0]) if drowned.size else rho.size
     return np.ascontiguousarray(rho[: max(end, 1)])

@@ -26,6 +26,8 @@ from darkedge.analysis.captures import FloatArray
 BoolArray = NDArray[np.bool_]
 
 ITERATIONS = 25
+LEAST_GAIN = 1e-6
+"""Share of the sum of squares that a step must win to be worth another; noise moves it by far more."""
 _ROOT_HALF = float(np.sqrt(0.5))
 _ROOT_TWO_PI = float(np.sqrt(2 * np.pi))
 _LIMITS = (np.log(2e-3), np.log(20.0))
@@ -171,14 +173,13 @@ def fit_shapes(
         new_residual = progress - new_value
         new_cost = np.sum(weight * new_residual**2, axis=1)
         better = new_cost <= cost
-        gain = np.where(better, cost - new_cost, 0.0)
         parameters = np.where(better[:, None], tried, parameters)
         residual = np.where(better[:, None], new_residual, residual)
         jacobian = np.where(better[:, None, None], new_jacobian, jacobian)
         cost = np.where(better, new_cost, cost)
         damping = np.clip(np.where(better, damping * 0.2, damping * 8.0), 1e-9, 1e9)
-        small = np.max(np.abs(step), axis=1) < 1e-6
-        if bool(np.all(small | (better & (gain <= 1e-9 * cost)) | (damping >= 1e9))):
+        promised = np.sum(step * pull, axis=1)  # twice what the step would win, were the problem linear
+        if bool(np.all((promised <= LEAST_GAIN * cost) | (cost < 1e-14))):
             break
     return _finished(parameters, jacobian, residual, weight, free)
 
