@@ -50,6 +50,10 @@ class Call:
 Handler = Callable[[Call], Reply]
 
 
+class NeverDone(Exception):  # noqa: N818 - not an error: the answer simply never comes
+    """Pending work will not end by itself; a client that waits for it gets no answer."""
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Command:
     """A command or query and what carries it out."""
@@ -183,6 +187,8 @@ class ScpiInstrument:
                     path = self._carry_out_unit(parse_unit(text), path, replies)
         except ScpiError as error:
             self.status.report(error)
+        except NeverDone:
+            replies.clear()
         self.status.message_available = False
         return b";".join(replies) + b"\n" if replies else b""
 
