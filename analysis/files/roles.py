@@ -1,0 +1,161 @@
+"""Which channel is which: the drive, and the outputs of the elements."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+from darkedge.analysis.errors import CaptureError, InputError
+
+_DRIVE_WORDS = {"drive", "input", "generator", "gen", "led", "emitter", "laser", "stimulus", "excitation", "vin"}
+_OUTPUT_WORDS = {"output", "out", "detector", "det", "photodiode", "pd", "collector", "receiver", "response", "vout"}
+_INPUT = re.compile(r"(?:x\()?(?:ch|c|chan|channel)?[ _]?\d+\)?", re.IGNORECASE)
+_IN = re.compile(r"\(in\)$|^v?in$|[ _]in$", re.IGNORECASE)
+_COMPUTED = re.compile(r"(?:f|m|r|math|ref|fft|func|memory)[ _]?\d*", re.IGNORECASE)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ChannelRoles:
+    """What the user says of the channels: each a name, or a number.
+
+    A number means the channel whose name ends in it (`2` is `CH2`, `C2`, `Channel 2`); where no channel is numbered,
+    it counts the channels from 1.
+    """
+
+    drive: str | None = None
+    outputs: Mapping[int, str]
+
+    @classmethod
+    def parse(cls, text: str) -> ChannelRoles:
+        """Read `drive=1,output=3` or, with several elements, `drive=1,output=2,output2=3`.
+
+        Raises
+        ------
+        InputError
+            No role or a role twice, an unknown role, one channel in two roles, no output.
+        """
+        where = f"--channels {text}"
+        found: dict[str, str] = {}
+        for part in text.split(","):
+            role, equals, channel = (piece.strip() for piece in part.partition("="))
+            match = re.fullmatch(r"drive|output([1-9]\d*)?", role)
+            if not equals or not channel or match is None:
+                raise InputError(
+                    "not a channel with its role", where=where, found=repr(part.strip()),
+                    wanted="drive=1,output=2 or drive=1,output=2,output2=3",
+                )  # fmt: skip
+            role = "output" if role == "output1" else role
+            if role in found or channel in found.values():
+                raise InputError("a role or channel is given twice", where=where, found=repr(part.strip()))
+            found[role] = channel
+        drive = found.pop("drive", None)
+        if not found:
+            raise InputError("no output is named", where=where, mend="add the output's channel, such as output=2")
+        return cls(drive=drive, outputs={int(role.removeprefix("output") or 1): c for role, c in found.items()})
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Assignment:
+    """Places of the channels in their roles, counted from 0."""
+
+    drive: int | None
+    outputs: Mapping[int, int]
+
+
+def assign_roles(names: Sequence[str], stated: ChannelRoles | None = None) -> Assignment:
+    """Decide which channel is the drive and which the output of which element.
+
+    What the user states decides. Else words in the names do (`drive`, `input`, `generator`, `led`, `emitter` ...;
+    `output`, `detector`, `photodiode`, `collector` ...). Else a lone channel is the output, and of two the first is the
+    drive and the second the output, where computed traces (`F1` beside channels `1` and `3`) do not count. More are
+    never guessed at.
+
+    Parameters
+    ----------
+    names : sequence of str
+        Names of the channels, in the order of the file; empty where the file gives none.
+    stated : ChannelRoles, optional
+
+    Raises
+    ------
+    CaptureError
+        A stated channel is not in the file, or the roles cannot be told.
+    """
+    if stated is not None:
+        outputs = {element: _find(names, channel) for element, channel in stated.outputs.items()}
+        return Assignment(drive=_find(names, stated.drive) if stated.drive is not None else None, outputs=outputs)
+    by_words = _by_words(names)
+    if by_words is not None:
+        return by_words
+    channels = plain_channels(names)
+    if len(channels) == 1:
+        return Assignment(drive=None, outputs={1: channels[0]})
+    if len(channels) == 2:
+        return Assignment(drive=channels[0], outputs={1: channels[1]})
+    raise _undecided(names)
+
+
+def plain_channels(names: Sequence[str]) -> list[int]:
+    """Places of the channels without the computed traces (`F1`, `MATH`, `REF2` ...) beside numbered inputs."""
+    inputs = [place for place, name in enumerate(names) if _INPUT.fullmatch(name.strip())]
+    if not inputs:
+        return list(range(len(names)))
+    return [place for place, name in enumerate(names) if not _COMPUTED.fullmatch(name.strip())]
+
+
+def _by_words(names: Sequence[str]) -> Assignment | None:
+    drives: list[int] = []
+    outputs: dict[int, int] = {}
+    for place, name in enumerate(names):
+        for word, number in re.findall(r"([a-z]+)[ _]?(\d*)", name.casefold()):
+            if word in _DRIVE_WORDS or _IN.search(name):
+                drives.append(place)
+                break
+            if word in _OUTPUT_WORDS:
+                if outputs.setdefault(int(number or 1), place) != place:
+                    raise _undecided(names)
+                break
+    if not drives and not outputs:
+        return None
+    rest = [place for place in plain_channels(names) if place not in drives and place not in outputs.values()]
+    if len(drives) > 1 or (not outputs and len(rest) != 1) or (not drives and rest):
+        raise _undecided(names)
+    return Assignment(drive=drives[0] if drives else None, outputs=outputs or {1: rest[0]})
+
+
+def _find(names: Sequence[str], channel: str) -> int:
+    wanted = channel.strip().casefold()
+    exact = [place for place, name in enumerate(names) if name.strip().casefold() == wanted]
+    if len(exact) == 1:
+        return exact[0]
+    if not exact and wanted.isdecimal():
+        numbered = {place: int(m["number"]) for place, name in enumerate(names) if (m := _ends_in_number(name))}
+        if not numbered and 1 <= int(wanted) <= len(names):
+            return int(wanted) - 1
+        same = [place for place, number in numbered.items() if number == int(wanted)]
+        same = [place for place in same if place in plain_channels(names)] or same
+        if len(same) == 1:
+            return same[0]
+    raise CaptureError(
+        f"the channel {channel} of --channels is not in the file, or is there twice",
+        found=_listed(names),
+        mend="name one of these channels",
+    )
+
+
+def _ends_in_number(name: str) -> re.Match[str] | None:
+    return re.fullmatch(r".*?(?P<number>\d+)\)?", name.strip())
+
+
+def _undecided(names: Sequence[str]) -> CaptureError:
+    return CaptureError(
+        "it cannot be told which channel is the drive and which the output",
+        found=_listed(names),
+        wanted="one channel (the output), or two (drive, then output)",
+        mend="say which with --channels, such as drive=1,output=2",
+    )
+
+
+def _listed(names: Sequence[str]) -> str:
+    return "channels " + ", ".join(name or f"number {place + 1}" for place, name in enumerate(names))
