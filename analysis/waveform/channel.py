@@ -32,7 +32,11 @@ LEVEL_SHIFT_RATIO = 2e-3
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Channel:
-    """What one channel shows. `step_V` is the voltage of one code, 0 where none is seen."""
+    """What one channel shows.
+
+    `step_V` is the voltage of one code, 0 where none is seen; `hiss_V` the noise that changes from sample to
+    sample, which ringing does not enter.
+    """
 
     levels: StateLevels
     noise: Noise
@@ -41,6 +45,7 @@ class Channel:
     low: Plateau
     high: Plateau
     step_V: float
+    hiss_V: float
     start_s: float
     end_s: float
 
@@ -82,7 +87,7 @@ def measure_channel(
     )
     return Channel(
         levels=refined.levels, noise=refined.noise, transitions=transitions, changes=changes, low=refined.low,
-        high=refined.high, step_V=step, start_s=float(time[0]), end_s=float(time[-1]),
+        high=refined.high, step_V=step, hiss_V=noise_V, start_s=float(time[0]), end_s=float(time[-1]),
     )  # fmt: skip
 
 

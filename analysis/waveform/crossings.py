@@ -111,11 +111,11 @@ def _straight_lines(
     n_samples = np.searchsorted(time_s, rough_s[:, 2]) - np.searchsorted(time_s, rough_s[:, 0])
     # Between two samples the true edge may bend: anywhere in the step if it is all there is, less with more samples.
     bend = step_s / np.sqrt(12) / np.maximum(n_samples, 1)[:, None]
-    variance = (noise.sigma_V / slope) ** 2 + bend**2
+    variance = (noise.sigma_V / slope) ** 2
     to_high = np.where(changes.rising[:, None], fractions, 1.0 - np.asarray(fractions))
     return Transitions(
         fractions=fractions, rising=changes.rising, time_s=crossings,
-        covariance_s2=variance[:, :, None] * np.eye(len(fractions)),
+        covariance_s2=variance[:, :, None] * np.eye(len(fractions)), bend_s=bend,
         pull_s_per_V=np.stack(((1.0 - to_high) / slope, to_high / slope), axis=2),
         n_samples=np.asarray(n_samples, dtype=np.intp), by_shape=np.zeros(changes.index.size, dtype=np.bool_),
     )  # fmt: skip
@@ -404,14 +404,16 @@ def _put_back(
     scale = (unit * noise.sigma_V / levels.amplitude_V) ** 2
     covariance = _covariance(fine.gain, noise, pieces.group) * scale[:, None, None]
     n_samples = straight.n_samples[pieces.which]
-    bend = unit / np.sqrt(12) / np.maximum(n_samples, 1) ** 2
-    covariance += ((unit[:, None] * fine.doubt) ** 2 + (bend**2)[:, None])[:, :, None] * np.eye(x.shape[1])
+    between = unit / np.sqrt(12) / np.maximum(n_samples, 1) ** 2
+    bend = np.hypot(unit[:, None] * fine.doubt, between[:, None])
     pull = unit[:, None, None] * (fine.gain @ _progress_by_levels(pieces)) / levels.amplitude_V
     times, covariances, pulls = straight.time_s.copy(), straight.covariance_s2.copy(), straight.pull_s_per_V.copy()
     times[rows], covariances[rows], pulls[rows] = time[kept], covariance[kept], pull[kept]
-    by_shape = straight.by_shape.copy()
-    by_shape[rows] = ~fine.corrected[kept]
-    return replace(straight, time_s=times, covariance_s2=covariances, pull_s_per_V=pulls, by_shape=by_shape)
+    by_shape, bends = straight.by_shape.copy(), straight.bend_s.copy()
+    by_shape[rows], bends[rows] = ~fine.corrected[kept], bend[kept]
+    return replace(
+        straight, time_s=times, covariance_s2=covariances, bend_s=bends, pull_s_per_V=pulls, by_shape=by_shape
+    )  # fmt: skip
 
 
 def _progress_by_levels(pieces: _Pieces) -> FloatArray:

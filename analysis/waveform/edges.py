@@ -52,7 +52,8 @@ class Transitions:
     """Edges with the instants at which they pass the reference levels.
 
     `fractions` are the m reference levels as progress, rising; `time_s` (n, m) the instants; `covariance_s2` (n, m, m)
-    their covariance from noise and sampling alone; `pull_s_per_V` (n, m, 2) how far an error of the low and of the
+    their covariance from noise; `bend_s` (n, m) what the edge's unknown course between samples leaves open, which
+    edges sampled alike share; `pull_s_per_V` (n, m, 2) how far an error of the low and of the
     high level moves them; `n_samples` (n,) counts samples between 10 and 90 %; `by_shape` (n,) says whether the
     fitted edge shape stands alone, without correction.
     """
@@ -61,14 +62,15 @@ class Transitions:
     rising: BoolArray
     time_s: FloatArray
     covariance_s2: FloatArray
+    bend_s: FloatArray
     pull_s_per_V: FloatArray
     n_samples: IntArray
     by_shape: BoolArray
 
     @property
     def u_time_s(self) -> FloatArray:
-        """Standard uncertainty of each instant from noise and sampling alone, shape (n, m)."""
-        return np.asarray(np.sqrt(np.einsum("eii->ei", self.covariance_s2)))
+        """Standard uncertainty of each instant from noise and sampling, the levels taken as known; shape (n, m)."""
+        return np.asarray(np.sqrt(np.einsum("eii->ei", self.covariance_s2) + self.bend_s**2))
 
 
 def find_changes(signal_V: FloatArray, levels: StateLevels, *, smooth: int = 1) -> Changes:

@@ -7,6 +7,7 @@ import numpy as np
 from darkedge.analysis.captures import FloatArray
 from darkedge.analysis.waveform.channel import Channel
 from darkedge.analysis.waveform.edges import FEW_ON_EDGE, ONE_POLE_SKEW
+from darkedge.analysis.waveform.noise import ENOUGH_FLAT_SAMPLES, difference_sigma
 from darkedge.analysis.waveform.plateaus import Plateau
 
 OVERSHOOT_RATIO = 0.05
@@ -16,6 +17,13 @@ DROOP_RATIO = 0.01
 """Slope of a plateau from end to end, over the amplitude, that is called droop (common practice, no source)."""
 
 TAIL_EXCESS = 1.15
+"""Times the skewness of one pole from which an edge has a slow tail (common practice, no source)."""
+
+LEAST_STUCK = 5
+"""Samples at the very extreme of a record from which it may be clipped."""
+
+QUIET_RATIO = 2e-4
+"""Noise over amplitude below which a record is taken for computed, not captured."""
 
 
 def trace_flags(signal_V: FloatArray, time_s: FloatArray, channel: Channel) -> set[str]:
@@ -33,29 +41,30 @@ def trace_flags(signal_V: FloatArray, time_s: FloatArray, channel: Channel) -> s
     return {code for code, true in tests.items() if true}
 
 
-def is_clipped(signal_V: FloatArray, channel: Channel | None) -> bool:
+def is_clipped(signal_V: FloatArray, channel: Channel) -> bool:
     """Whether samples are stuck at the end of the range.
 
     A state is clipped where its samples repeat the very extreme of the record although the noise of the other state
-    spreads over several codes: noise does not stop at a level by itself. Records without noise cannot tell.
+    spreads over several codes: noise does not stop at a level by itself. A record without noise cannot tell.
     """
-    if channel is None:
-        return False
     middle = 0.5 * (channel.levels.low_V + channel.levels.high_V)
     high, low = signal_V[signal_V > middle], signal_V[signal_V <= middle]
-    return _stuck(high, low, channel, float(np.max(signal_V))) or _stuck(low, high, channel, float(np.min(signal_V)))
+    return _stuck(high, low, float(np.max(signal_V)), channel, channel.low.sigma_V) or _stuck(
+        low, high, float(np.min(signal_V)), channel, channel.high.sigma_V
+    )
 
 
-def _stuck(part: FloatArray, other: FloatArray, channel: Channel, extreme: float) -> bool:
-    if part.size < 5 or other.size < 20:
+def _stuck(part: FloatArray, other: FloatArray, extreme: float, channel: Channel, noise_V: float) -> bool:
+    if other.size < ENOUGH_FLAT_SAMPLES:
         return False
-    spread = 1.4826 * float(np.median(np.abs(other - np.median(other))))
-    if spread <= 0.7 * channel.step_V or spread <= 1e-9 * channel.levels.amplitude_V:
+    noise_V = min(noise_V, 4 * difference_sigma(other))  # a tail that no fit describes is no noise
+    if noise_V <= max(0.7 * channel.step_V, QUIET_RATIO * channel.levels.amplitude_V):
         return False
     tolerance = 1e-6 * channel.levels.amplitude_V
-    stuck = int(np.sum(np.abs(part - extreme) <= tolerance))
-    nearby = int(np.sum(np.abs(part - extreme) <= max(2.5 * channel.step_V, 0.5 * spread))) - stuck
-    return stuck >= 5 and stuck > 2 * nearby
+    away = np.abs(part - extreme)
+    stuck = int(np.sum(away <= tolerance))
+    nearby = int(np.sum(away <= max(2.5 * channel.step_V, 0.5 * noise_V))) - stuck
+    return stuck >= LEAST_STUCK and stuck > 2 * nearby
 
 
 def is_min_max(signal_V: FloatArray) -> bool:
@@ -84,7 +93,9 @@ def rings(signal_V: FloatArray, time_s: FloatArray, channel: Channel) -> bool:
     """Whether an edge overshoots its state within three edge times (the post-transition region of IEEE Std 181)."""
     transitions, levels = channel.transitions, channel.levels
     borders = channel.changes.borders(signal_V.size)
-    limit = max(OVERSHOOT_RATIO * levels.amplitude_V, 5.5 * channel.noise.sigma_V)
+    # Ringing itself passes for noise on a short plateau, so the noise from sample to sample bounds it.
+    noise_V = min(channel.noise.sigma_V, 4 * channel.hiss_V)
+    limit = max(OVERSHOOT_RATIO * levels.amplitude_V, 5.5 * noise_V)
     for edge, rising in enumerate(transitions.rising):
         late = transitions.time_s[edge, -1]
         until = late + 3 * (late - transitions.time_s[edge, 0])

@@ -22,19 +22,22 @@ OUTPUT, DRIVE = 0, 1
 class Instants:
     """Crossings of one level, one for each pulse.
 
-    `time_s` and `u_s` (noise and sampling) have shape (n,); `pull` (n, 4) is the shift in seconds per volt of error of
-    output low, output high, drive low and drive high level.
+    `time_s` has shape (n,), as have `u_s`, the standard uncertainty from noise, and `bend_s`, that from sampling,
+    which pulses sampled alike share; `pull` (n, 4) is the shift in seconds per volt of error of output low, output
+    high, drive low and drive high level.
     """
 
     time_s: FloatArray
     u_s: FloatArray
+    bend_s: FloatArray
     pull: FloatArray
 
     def since(self, other: Instants) -> Instants:
         """Intervals from `other` to these instants, pulse by pulse."""
         return Instants(
-            time_s=self.time_s - other.time_s, u_s=np.hypot(self.u_s, other.u_s), pull=self.pull - other.pull
-        )
+            time_s=self.time_s - other.time_s, u_s=np.hypot(self.u_s, other.u_s),
+            bend_s=np.hypot(self.bend_s, other.bend_s), pull=self.pull - other.pull,
+        )  # fmt: skip
 
     def mean(self) -> Interval:
         """Mean over the pulses; what scatters more than its noise gets the scatter's uncertainty."""
@@ -42,16 +45,21 @@ class Instants:
         u = float(np.sqrt(np.sum(self.u_s**2))) / n
         if n >= 3:
             u = max(u, float(np.std(self.time_s, ddof=1)) / np.sqrt(n))
+        u = float(np.sqrt(u**2 + np.mean(self.bend_s**2)))
         return Interval(value_s=float(np.mean(self.time_s)), u_noise_s=u, pull=np.mean(self.pull, axis=0))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Interval:
-    """A mean interval: value, uncertainty from noise, and its pull by the four levels (see `Instants`)."""
+    """A mean interval: value, uncertainty from noise and sampling, and pull by the four levels (see `Instants`)."""
 
     value_s: float
     u_noise_s: float
     pull: FloatArray
+
+    def short_of(self, whole_s: float) -> Interval:
+        """What is left of `whole_s`, which is taken as known, once this interval is taken off."""
+        return Interval(value_s=whole_s - self.value_s, u_noise_s=self.u_noise_s, pull=-self.pull)
 
     def minus(self, other: Interval) -> Interval:
         """Difference of two intervals; level errors that they share cancel as far as they pull alike."""
@@ -96,7 +104,10 @@ def instants(transitions: Transitions, which: IntArray, column: int, *, channel:
     """
     pull = np.zeros((which.size, 4))
     pull[:, 2 * channel : 2 * channel + 2] = transitions.pull_s_per_V[which, column]
-    return Instants(time_s=transitions.time_s[which, column], u_s=transitions.u_time_s[which, column], pull=pull)
+    return Instants(
+        time_s=transitions.time_s[which, column], u_s=np.sqrt(transitions.covariance_s2[which, column, column]),
+        bend_s=transitions.bend_s[which, column], pull=pull,
+    )  # fmt: skip
 
 
 def durations(transitions: Transitions, which: IntArray) -> Instants:
@@ -111,5 +122,6 @@ def durations(transitions: Transitions, which: IntArray) -> Instants:
     return Instants(
         time_s=transitions.time_s[which, -1] - transitions.time_s[which, 0],
         u_s=np.sqrt(np.maximum(variance, 0.0)),
+        bend_s=np.hypot(transitions.bend_s[which, 0], transitions.bend_s[which, -1]),
         pull=pull,
     )

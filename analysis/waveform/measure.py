@@ -17,31 +17,45 @@ from darkedge.analysis.captures import (
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.waveform.channel import Channel, measure_channel
+from darkedge.analysis.waveform.crossings import ENOUGH_TO_FIT
 from darkedge.analysis.waveform.edges import IntArray
 from darkedge.analysis.waveform.flaws import trace_flags
-from darkedge.analysis.waveform.intervals import DRIVE, OUTPUT, Budget, level_uncertainties
+from darkedge.analysis.waveform.intervals import DRIVE, OUTPUT, Budget, Interval, level_uncertainties
 from darkedge.analysis.waveform.pulses import (
     Pairing,
     light_makes_high,
+    mean_width,
     pair_edges,
     period_of,
-    pulse_widths,
     time_delays,
     time_edges,
 )
 from darkedge.analysis.waveform.switching import switching_times
 
 LEVELS = "histogram 10/50/90 %"
-ESTIMATOR = "local polynomial"
+BY_SHAPE, BY_POLYNOMIAL, BY_LINE = "edge shape", "local polynomial", "straight line"
+"""How the edges were timed: fitted shape, shape with its residuals smoothed, or two samples and a straight line."""
 
 BENCH_RATIO = 1.5
 """An edge less than this many times the bench's own is called bench limited."""
 
 LARGE_SWING_RATIO = 0.1
+"""Swing over bias beyond which the capacitance changes during the edge."""
+
 USED_UP_RATIO = 0.2
+"""Share of the bias that must be left across the junction with the light on (common practice, no source)."""
+
 LOADING_RATIO = 0.01
+"""Load over input resistance beyond which the scope's input counts as part of the load."""
+
 LIMIT_MARGIN = 10.0
+"""A bandwidth limit's own rise time, 0.35 / bandwidth, is to be this many times shorter than the edge."""
+
 CURRENT_MATCH_RATIO = 0.1
+"""Difference of emitter current from that of the bench response that is still taken for the same."""
+
+UNSATURATED_V = 1.0
+"""Voltage left across an output transistor above which it is surely not saturated (common practice, no source)."""
 
 _DIODES = (DeviceKind.PHOTODIODE, DeviceKind.PIN)
 _SWITCHES = (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
@@ -88,17 +102,18 @@ def _measure_element(
     if channel is None:
         return Measurement(
             capture=capture.name, element=element, conditions=conditions, flags=(*flags, "no_pulse"), levels=LEVELS,
-            estimator=ESTIMATOR, n_pulses=0,
+            n_pulses=0,
         )  # fmt: skip
     pairing = pair_edges(drive.transitions, channel.transitions, end_s=channel.end_s) if drive is not None else None
     job = _Job(
-        record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive, pairing=pairing
+        record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive, pairing=pairing,
+        period=_period(drive, channel, conditions),
     )  # fmt: skip
     quantities = job.levels() | job.times()
     flags |= job.flags(quantities)
     return Measurement(
         capture=capture.name, element=element, conditions=conditions, quantities=quantities, flags=tuple(flags),
-        levels=LEVELS, estimator=ESTIMATOR, n_pulses=job.n_pulses(),
+        levels=LEVELS, estimator=job.estimator(), n_pulses=job.n_pulses(),
     )  # fmt: skip
 
 
@@ -112,6 +127,7 @@ class _Job:
     channel: Channel
     drive: Channel | None
     pairing: Pairing | None
+    period: Estimate | None
 
     def edges(self) -> IntArray:
         """Output edges that count: those that answer the drive, all of them where there is none."""
@@ -119,6 +135,15 @@ class _Job:
         if pairing is not None:
             return np.sort(pairing.output)
         return np.arange(self.channel.transitions.rising.size, dtype=np.intp)
+
+    def estimator(self) -> str | None:
+        """How most of the edges that count were timed."""
+        edges, transitions = self.edges(), self.channel.transitions
+        if edges.size == 0:
+            return None
+        if np.mean(transitions.by_shape[edges]) > 0.5:
+            return BY_SHAPE
+        return BY_POLYNOMIAL if np.median(transitions.n_samples[edges]) >= ENOUGH_TO_FIT else BY_LINE
 
     def n_pulses(self) -> int:
         rising = self.channel.transitions.rising[self.edges()]
@@ -158,7 +183,39 @@ class _Job:
             found["photocurrent_A"] = Estimate(value=current, u=u)
         if self.conditions.output_connection == OutputConnection.PULL_UP and self.conditions.device_kind in _SWITCHES:
             found["output_low_V"] = found["low_V"]
-        return found
+        ratio = self._transfer_ratio(found)
+        return found if ratio is None else found | {"current_transfer_ratio": ratio}
+
+    def _transfer_ratio(self, levels: dict[str, Estimate]) -> Estimate | None:
+        """Collector current over emitter current of a coupler; only a lower bound where the output may be saturated.
+
+        The collector current is the swing over the effective load (IEC 60747-5-5, current transfer ratio).
+        """
+        known = self.conditions
+        driven = known.driven_element in (None, known.element)
+        if (
+            known.device_kind != DeviceKind.OPTOCOUPLER
+            or not driven
+            or not known.load_ohm
+            or not known.emitter_current_A
+        ):
+            return None
+        load = self.fixture.effective_load(known.load_ohm, known.input_ohm)
+        amplitude = levels["amplitude_V"]
+        value = (amplitude.value or 0.0) / (load.value or 1.0) / known.emitter_current_A
+        u = value * float(
+            np.hypot((amplitude.u or 0.0) / (amplitude.value or 1.0), (load.u or 0.0) / (load.value or 1.0))
+        )
+        if self._voltage_left() > UNSATURATED_V:
+            return Estimate(value=value, u=u)
+        return Estimate(lo95=value - 1.645 * u)
+
+    def _voltage_left(self) -> float:
+        """Voltage across the output transistor with the light on; 0 where it cannot be told."""
+        if self.conditions.output_connection == OutputConnection.PULL_UP:
+            return self.channel.levels.low_V
+        supply = self.conditions.bias_read_V if self.conditions.bias_read_V is not None else self.conditions.bias_V
+        return 0.0 if supply is None else supply - self.channel.levels.high_V
 
     def times(self) -> dict[str, Estimate]:
         """Rise and fall, and what drive, period and polarity allow of delays, widths, duties and switching times."""
@@ -175,30 +232,35 @@ class _Job:
         return found | self._widths(budget, light_high)
 
     def _widths(self, budget: Budget, light_high: bool | None) -> dict[str, Estimate]:
-        found: dict[str, Estimate] = {}
-        pairing = self.pairing
-        width_out = width_in = None
-        if light_high is not None:
-            width_out = pulse_widths(self.channel.transitions, self.edges(), active_high=light_high, channel=OUTPUT)
+        """Widths of drive and output pulses, and the duties where the period is known."""
+        period, pairing = self.period_s(), self.pairing
+        means: dict[str, Interval] = {}
         if self.drive is not None:
             drive_high = True if pairing is None or light_high is None else light_high != pairing.inverting
             every = np.arange(self.drive.transitions.rising.size, dtype=np.intp)
-            width_in = pulse_widths(self.drive.transitions, every, active_high=drive_high, channel=DRIVE)
-        period = self.period_s()
-        means = {name: widths.mean() for name, widths in (("in", width_in), ("out", width_out)) if widths is not None}
-        for side, mean in means.items():
-            found[f"width_{side}_s"] = budget.estimate(mean)
-            if period is not None:
-                found[f"duty_{side}"] = _without_timebase(budget).estimate(mean, scale=1 / period)
+            drive = self.drive.transitions
+            width = mean_width(drive, every, active_high=drive_high, channel=DRIVE, period_s=period)
+            means |= {} if width is None else {"in": width}
+        if light_high is not None:
+            output = self.channel.transitions
+            width = mean_width(output, self.edges(), active_high=light_high, channel=OUTPUT, period_s=period)
+            means |= {} if width is None else {"out": width}
+        found = {f"width_{side}_s": budget.estimate(mean) for side, mean in means.items()}
+        found |= {f"duty_{side}": self._share(mean, budget) for side, mean in means.items() if period is not None}
         if period is not None and len(means) == 2:
-            change = means["out"].minus(means["in"])
-            found["duty_cycle_distortion"] = _without_timebase(budget).estimate(change, scale=1 / period)
+            found["duty_cycle_distortion"] = self._share(means["out"].minus(means["in"]), budget)
         return found
 
+    def _share(self, interval: Interval, budget: Budget) -> Estimate:
+        """An interval over the period, whose uncertainty joins; the error of their common time base cancels."""
+        period = self.period
+        whole, u_whole = (1.0, 0.0) if period is None else (period.value or 1.0, period.u or 0.0)
+        ratio = replace(budget, u_timebase_ratio=0.0)
+        return ratio.estimate(interval, u_more_s=abs(interval.value_s) * u_whole / whole, scale=1 / whole)
+
     def period_s(self) -> float | None:
-        """Period from the edges, else as stated."""
-        seen = period_of(self.drive.transitions if self.drive else None) or period_of(self.channel.transitions)
-        return seen.value if seen is not None else self.conditions.drive_period_s
+        """Period of the pulses, `None` where it is neither in the capture nor stated."""
+        return None if self.period is None else self.period.value
 
     def flags(self, quantities: dict[str, Estimate]) -> set[str]:
         """Flags of the trace, the pairing, the bias and the bench."""
@@ -246,9 +308,13 @@ class _Job:
         return found
 
 
-def _without_timebase(budget: Budget) -> Budget:
-    """A duty is a ratio of two times on one time base, whose error cancels."""
-    return replace(budget, u_timebase_ratio=0.0)
+def _period(drive: Channel | None, output: Channel, conditions: Conditions) -> Estimate | None:
+    """Period from whichever channel tells it best, else as stated."""
+    seen = [found for channel in (drive, output) if channel and (found := period_of(channel.transitions)) is not None]
+    if seen:
+        return min(seen, key=lambda found: found.u or 0.0)
+    stated = conditions.drive_period_s
+    return None if stated is None else Estimate(value=stated, u=0.0)
 
 
 def _connection_high(conditions: Conditions) -> bool | None:

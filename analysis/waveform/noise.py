@@ -18,8 +18,8 @@ ENOUGH_FLAT_SAMPLES = 30
 
 LONGEST_LAG = 256
 
-FEWEST_CODES, MOST_CODES = 4, 65536
-"""Largest step of a record, in smallest steps, between which the smallest step is taken for a code."""
+FEWEST_CODES, MOST_CODES = 8, 65536
+"""Reach of a record, in its smallest steps, between which the smallest step is taken for a code."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -85,14 +85,14 @@ def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:
     if stated_V is not None and stated_V > 0:
         return stated_V
     steps = np.abs(np.diff(signal_V))
-    largest = float(np.max(steps))
+    largest, reach = float(np.max(steps)), float(np.ptp(signal_V))
     steps = steps[steps > 1e-9 * max(largest, float(np.max(np.abs(signal_V))))]
     if steps.size < 2:
         return 0.0
     step = float(np.min(steps))
     multiples = steps / step
     whole = np.abs(multiples - np.round(multiples)) < 0.02 * np.maximum(1.0, multiples / 50)
-    plausible = FEWEST_CODES <= largest / step < MOST_CODES and multiples.size > 20
+    plausible = FEWEST_CODES <= reach / step < MOST_CODES and multiples.size > 20
     return step if plausible and bool(np.mean(whole) > 0.99) else 0.0
 
 

@@ -27,13 +27,14 @@ class Plateau:
     """One state as its plateaus show it.
 
     `level_V` is where the signal has got to at the end of a plateau; `settled` whether a plateau is long enough for
-    five time constants; `sag_ratio` how far the state sinks back towards the other one over the later two
+    five time constants; `sigma_V` the noise of this state alone; `sag_ratio` how far the state sinks back towards the other one over the later two
     thirds of a plateau, as a share of the amplitude, and `u_sag_ratio` its uncertainty.
     """
 
     level_V: float
     u_level_V: float
     settled: bool
+    sigma_V: float = 0.0
     sag_ratio: float = 0.0
     u_sag_ratio: float = 0.0
 
@@ -80,8 +81,13 @@ class _Draft:
         u_sag = noise.sigma_V * float(np.sqrt(self.sag_factor * inflation))
         return Plateau(
             level_V=self.level_V, u_level_V=float(np.hypot(u, u_code_V)), settled=self.settled,
-            sag_ratio=self.sag_V / amplitude_V, u_sag_ratio=u_sag / amplitude_V,
+            sigma_V=_sigma(self.residuals_V), sag_ratio=self.sag_V / amplitude_V, u_sag_ratio=u_sag / amplitude_V,
         )  # fmt: skip
+
+
+def _sigma(residuals_V: tuple[FloatArray, ...]) -> float:
+    n = sum(part.size for part in residuals_V)
+    return float(np.sqrt(sum(float(np.sum(part**2)) for part in residuals_V) / n)) if n else 0.0
 
 
 def refine_levels(

@@ -53,12 +53,13 @@ def pair_edges(drive: Transitions, output: Transitions, *, end_s: float) -> Pair
     chosen = min(good, key=lambda k: _slower_delay(drive, output, tries[k]))
     pairs = tries[chosen]
     lag = _slower_delay(drive, output, pairs)
-    lonely_output = output.rising.size - pairs.shape[0]
+    lonely = np.setdiff1d(np.arange(output.rising.size), pairs[:, 1])
+    unasked = output.time_s[lonely, 1] > drive.time_s[0, 1] + lag  # earlier ones answer what came before the record
     unanswered = np.setdiff1d(np.arange(drive.rising.size), pairs[:, 0])
     had_room = drive.time_s[unanswered, 1] + 2 * lag < end_s
     return Pairing(
         drive=pairs[:, 0], output=pairs[:, 1], inverting=bool(chosen),
-        left_over=lonely_output > 0 or bool(np.any(had_room)),
+        left_over=bool(np.any(unasked)) or bool(np.any(had_room)),
     )  # fmt: skip
 
 
@@ -158,7 +159,7 @@ def _jitter(each: list[Instants]) -> Estimate | None:
         return None
     dof = sum(x.time_s.size - 1 for x in groups)
     variance = sum(float(np.sum((x.time_s - x.time_s.mean()) ** 2)) for x in groups) / dof
-    noise = float(np.mean(np.concatenate([x.u_s for x in groups]) ** 2))
+    noise = float(np.mean(np.concatenate([x.u_s**2 + x.bend_s**2 for x in groups])))
     excess, u_excess = variance - noise, max(variance, noise) * float(np.sqrt(2 / dof))
     if excess > 2 * u_excess:
         value = float(np.sqrt(excess))
@@ -175,6 +176,19 @@ def pulse_widths(transitions: Transitions, which: IntArray, *, active_high: bool
     if first.size == 0:
         return None
     return instants(transitions, second, 1, channel=channel).since(instants(transitions, first, 1, channel=channel))
+
+
+def mean_width(
+    transitions: Transitions, which: IntArray, *, active_high: bool, channel: int, period_s: float | None
+) -> Interval | None:
+    """Mean width of the pulses, from whole pulses, else from whole gaps between them where the period is known."""
+    pulses = pulse_widths(transitions, which, active_high=active_high, channel=channel)
+    if pulses is not None:
+        return pulses.mean()
+    gaps = pulse_widths(transitions, which, active_high=not active_high, channel=channel)
+    if gaps is None or period_s is None or not bool(np.all(gaps.time_s < period_s)):
+        return None
+    return gaps.mean().short_of(period_s)
 
 
 def period_of(transitions: Transitions | None) -> Estimate | None:
