@@ -102,7 +102,7 @@ def _shortest(pulse: ShortestPulse) -> Plain:
 
 
 def _dark(fit: DarkFit) -> Plain:
-    points = [
+    points: list[Plain] = [
         {
             "bias_V": point.bias_V,
             **_with_twins("dark_current_A", point.current_A),
