@@ -24,7 +24,7 @@ class DarkFit:
     """Dark current against bias of one device and element.
 
     `model` names the terms kept ("saturation", "generation", "shunt", joined by "+"), empty where too few
-    points carry a value. `parameters`: `saturation_A`, `generation_A` (at one volt beyond built-in), `shunt_ohm`, those kept.
+    points carry a value. `parameters`: `saturation_A`, `generation_A` (at one volt), `shunt_ohm`, those kept.
     """
 
     device: str | None

@@ -39,8 +39,8 @@ def choices_json(choices: Sequence[Choice]) -> str:
 
 def screening_json(screening: Screening) -> str:
     """One object for each device and element, then one for each lot, as a JSON array."""
-    devices = [_device_verdict(device) for device in screening.devices]
-    lots = [
+    devices: list[Plain] = [_device_verdict(device) for device in screening.devices]
+    lots: list[Plain] = [
         {
             "lot": lot.lot,
             "verdict": lot.verdict.value,
