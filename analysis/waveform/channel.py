@@ -108,19 +108,22 @@ def _first_look(signal_V: FloatArray, noise_V: float) -> tuple[StateLevels, Chan
 def _refined(
     time_s: FloatArray, signal_V: FloatArray, levels: StateLevels, changes: Changes, noise_V: float, step_V: float
 ) -> Refined | None:
-    """Refine the levels, once more where they moved; `None` where the amplitude does not stand out."""
-    for _ in range(3):
+    """Refine levels and noise until they stay; `None` where the amplitude does not stand out.
+
+    Twice at least: only with the noise and its correlation known can it be told how much of a plateau belongs to the level.
+    """
+    noise = Noise(sigma_V=noise_V, correlation=np.ones(1), n_flat=0)
+    for again in (True, True, False):
         crossings = rough_crossings(time_s, signal_V, levels=levels, changes=changes)
         refined = refine_levels(
-            time_s, signal_V, levels=levels, changes=changes, crossings_s=crossings, noise_V=noise_V, step_V=step_V
+            time_s, signal_V, levels=levels, changes=changes, crossings_s=crossings, noise=noise, step_V=step_V
         )
-        new = refined.levels
-        noise_V = max(refined.noise.sigma_V, noise_V) if not refined.noise.known else refined.noise.sigma_V
-        if new.amplitude_V < max(LEAST_SIGNAL_TO_NOISE * noise_V, LEAST_CODES * step_V) or new.amplitude_V <= 0:
+        new, first, noise = refined.levels, noise.n_flat == 0, refined.noise
+        if new.amplitude_V <= max(LEAST_SIGNAL_TO_NOISE * noise.sigma_V, LEAST_CODES * step_V):
             return None
         moved = max(abs(new.low_V - levels.low_V), abs(new.high_V - levels.high_V))
         levels = new
-        if moved < LEVEL_SHIFT_RATIO * new.amplitude_V:
+        if not again or not (first or moved > LEVEL_SHIFT_RATIO * new.amplitude_V):
             break
     return refined
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 
 from darkedge.analysis.captures import FloatArray
@@ -57,7 +59,8 @@ def is_clipped(signal_V: FloatArray, channel: Channel) -> bool:
 def _stuck(part: FloatArray, other: FloatArray, extreme: float, channel: Channel, noise_V: float) -> bool:
     if other.size < ENOUGH_FLAT_SAMPLES:
         return False
-    noise_V = min(noise_V, 4 * difference_sigma(other))  # a tail that no fit describes is no noise
+    # Second differences tell noise from a tail that no fit describes; correlated noise makes them up to 4 times smaller.
+    noise_V = min(noise_V, 4 * difference_sigma(np.diff(other)) / math.sqrt(3))
     if noise_V <= max(0.7 * channel.step_V, QUIET_RATIO * channel.levels.amplitude_V):
         return False
     tolerance = 1e-6 * channel.levels.amplitude_V

@@ -19,6 +19,15 @@ START_RATIO = 1.5
 """A plateau is used from this many times the 50 to 90 % time after the 50 % point: 3.1 time constants, 1.9 sigma."""
 
 BINS = 512
+LEAST_ENTRIES = 8
+"""Entries from which an exponential is fitted to a plateau rather than a mean."""
+
+LEFT_OUT = (0.0, 0.25, 0.5, 0.75)
+"""Shares of a plateau left out at its start, one after the other, to see whether its level stays."""
+
+AGREEMENT = 3.0
+"""Levels from parts of a plateau agree within this many of the standard uncertainties of the shorter part."""
+
 _TAIL_FACTORS = 2.0 ** np.arange(-1.5, 4.1, 0.5)
 
 
@@ -97,7 +106,7 @@ def refine_levels(
     levels: StateLevels,
     changes: Changes,
     crossings_s: FloatArray,
-    noise_V: float,
+    noise: Noise,
     step_V: float,
 ) -> Refined:
     """Refine both levels and the noise from the plateaus between the edges.
@@ -110,15 +119,17 @@ def refine_levels(
     ----------
     crossings_s : array, shape (edges, 3)
         Instants at 10, 50 and 90 % progress, good to a sample.
-    noise_V, step_V : float
-        Noise and code step as known so far.
+    noise : Noise
+        As known so far.
+    step_V : float
+        Voltage of one code of the digitiser, 0 where unknown.
     """
     spans = _spans(time_s, changes, crossings_s)
     low, high = (
-        _draft(time_s, signal_V, [s for s in spans if s.high == state], high=state, noise_V=noise_V, levels=levels)
+        _draft(time_s, signal_V, [s for s in spans if s.high == state], high=state, noise=noise, levels=levels)
         for state in (False, True)
     )
-    noise = flat_noise([*low.residuals_V, *high.residuals_V], fallback_V=noise_V)
+    noise = flat_noise([*low.residuals_V, *high.residuals_V], fallback_V=noise.sigma_V)
     amplitude = high.level_V - low.level_V
     u_code = u_quantised_V(noise.sigma_V, step_V)
     scale = max(abs(amplitude), 1e-300)
@@ -147,18 +158,18 @@ def _spans(time_s: FloatArray, changes: Changes, crossings_s: FloatArray) -> lis
 
 
 def _draft(
-    time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise_V: float, levels: StateLevels
+    time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise, levels: StateLevels
 ) -> _Draft:
     after = [s for s in spans if s.after_edge]
     heads = [s for s in spans if not s.after_edge and s.stop - s.start >= 2]
     settled = [s for s in after if _settles(time_s, s)]
     if settled:
-        tail = _tail_fit(time_s, signal_V, settled, high=high)
-        return _join(tail, _head(signal_V, heads[0]), noise_V, levels.amplitude_V) if heads else tail
+        tail = _tail_fit(time_s, signal_V, settled, high=high, noise=noise)
+        return _join(tail, _head(signal_V, heads[0]), noise, levels.amplitude_V) if heads else tail
     whole = [s for s in after if s.before_edge]
     if heads and not whole:
         return _head(signal_V, heads[0])
-    return _peaks(time_s, signal_V, whole or after or spans, high=high, noise_V=noise_V, levels=levels)
+    return _peaks(time_s, signal_V, whole or after or spans, high=high, noise=noise, levels=levels)
 
 
 def _settles(time_s: FloatArray, span: _Span) -> bool:
@@ -166,56 +177,89 @@ def _settles(time_s: FloatArray, span: _Span) -> bool:
     return enough and bool(time_s[span.stop - 1] - span.middle_s >= SETTLED_RATIO * span.late_s)
 
 
-def _tail_fit(time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool) -> _Draft:
+def _tail_fit(time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise) -> _Draft:
     """Level at the end of plateaus, with the exponential tail of the edge before them.
 
-    Least squares for each of a row of time constants about the edge's own, the best of which is kept.
+    Of fits that leave out the first part of the plateau, more and more of it, the one that leaves out least and agrees
+    with all that leave out more is taken, so that ringing or a second tail does not reach the level (Lepski 1991).
     """
     offset = float(signal_V[spans[-1].stop - 1])
     x = np.concatenate([time_s[s.start : s.stop] - s.middle_s for s in spans])
     y = np.concatenate([signal_V[s.start : s.stop] for s in spans]) - offset
     begin, end = float(np.min(x)), float(np.mean([time_s[s.stop - 1] - s.middle_s for s in spans]))
-    each = x.size // len(spans)
-    bx, by, weight = _binned(x - begin, y)
     length = max(end - begin, 1e-300)
+    bx, by, weight = _binned(x - begin, y)
+    each = x.size // len(spans)
     tails = float(np.median([s.late_s for s in spans])) / np.log(5) * _TAIL_FACTORS
-    tails = tails[(tails <= length / 2) & (tails >= 2 * length / max(min(bx.size, each), 1))]
+    tails = tails[tails >= 2 * length / max(min(bx.size, each), 1)]
+    fits = [_best_tail(bx, by, weight, tails, left_out * length, length) for left_out in LEFT_OUT]
+    fit = _earliest_that_agrees([f for f in fits if f is not None], noise, each)
     sag, sag_factor = _sag(bx, by, weight, length)
-    sag = -sag if high else sag
-    total = float(np.sum(weight))
-    if tails.size == 0 or bx.size < 6:
-        level = float(np.sum(weight * by)) / total
-        residuals = tuple(signal_V[s.start : s.stop] - offset - level for s in spans)
-        return _Draft(
-            level_V=level + offset, factor=1 / total, neighbours=each, residuals_V=residuals, settled=True,
-            sag_V=sag, sag_factor=sag_factor,
-        )  # fmt: skip
-    constant, height, tail, factor = _best_tail(bx, by, weight, tails, length)
-    residuals = tuple(
-        signal_V[s.start : s.stop] - offset - constant
-        - height * np.exp(-np.maximum(time_s[s.start : s.stop] - s.middle_s - begin, 0.0) / tail)
-        for s in spans
-    )  # fmt: skip
-    level = constant + height * float(np.exp(-length / tail)) + offset
+    residuals = tuple(_residuals(time_s, signal_V, s, s.middle_s + begin, fit, offset) for s in spans)
     return _Draft(
-        level_V=level, factor=factor, neighbours=each, residuals_V=residuals, settled=True, sag_V=sag,
-        sag_factor=sag_factor,
+        level_V=fit.level + offset, factor=fit.factor, neighbours=each, residuals_V=residuals, settled=True,
+        sag_V=-sag if high else sag, sag_factor=sag_factor,
     )  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Tail:
+    """A constant and an exponential fitted to a plateau from `start` on.
+
+    `level` is their sum at the end of the plateau, `factor` its variance in units of one sample's. Without an
+    exponential `height` is 0.
+    """
+
+    start: float
+    constant: float
+    height: float
+    tail: float
+    level: float
+    factor: float
+
+
+def _residuals(
+    time_s: FloatArray, signal_V: FloatArray, span: _Span, begin_s: float, fit: _Tail, offset: float
+) -> FloatArray:
+    x = time_s[span.start : span.stop] - begin_s
+    used = x >= fit.start
+    course = fit.constant + fit.height * np.exp(-np.maximum(x[used], 0.0) / fit.tail)
+    return np.asarray(signal_V[span.start : span.stop][used] - offset - course)
+
+
+def _earliest_that_agrees(fits: list[_Tail], noise: Noise, neighbours: int) -> _Tail:
+    allowed_V = AGREEMENT * noise.sigma_V * noise.inflation(max(neighbours, 1)) ** 0.5
+    for k, fit in enumerate(fits):
+        if all(abs(fit.level - other.level) <= allowed_V * other.factor**0.5 for other in fits[k + 1 :]):
+            return fit
+    return fits[-1]
 
 
 def _best_tail(
-    x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArray, length: float
-) -> tuple[float, float, float, float]:
-    """Constant, height and time constant of the best exponential, and the variance factor of its value at the end."""
-    shape = np.exp(-x / tails[:, None])
+    x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArray, start: float, length: float
+) -> _Tail | None:
+    """Least squares for each of a row of time constants, the best of which is kept; `None` where too little is left."""
+    used = x >= start
+    x, y, weight = x[used], y[used], weight[used]
+    if start > 0 and x.size < LEAST_ENTRIES:
+        return None
     s0, y0 = float(np.sum(weight)), float(weight @ y)
+    tails = tails[tails <= (length - start) / 2]
+    if tails.size == 0 or x.size < LEAST_ENTRIES:
+        mean = y0 / s0
+        return _Tail(start=start, constant=mean, height=0.0, tail=1.0, level=mean, factor=1 / s0)
+    shape = np.exp(-(x - start) / tails[:, None])
     s1, s2, y1 = shape @ weight, (shape * shape) @ weight, shape @ (weight * y)
     determinant = np.maximum(s0 * s2 - s1 * s1, 1e-12 * s0 * s2)
     constant, height = (s2 * y0 - s1 * y1) / determinant, (s0 * y1 - s1 * y0) / determinant
-    best = int(np.argmax(constant * y0 + height * y1))  # what the fit explains: largest where the residuals are least
-    last = float(np.exp(-length / tails[best]))
-    factor = (s2[best] - 2 * s1[best] * last + s0 * last**2) / determinant[best]
-    return float(constant[best]), float(height[best]), float(tails[best]), float(factor)
+    best = int(np.argmax(constant * y0 + height * y1))  # what the fit explains: most where the residuals are least
+    tail = float(tails[best])
+    last = float(np.exp(-(length - start) / tail))
+    factor = float((s2[best] - 2 * s1[best] * last + s0 * last**2) / determinant[best])
+    return _Tail(
+        start=start, constant=float(constant[best]), height=float(height[best]) * float(np.exp(start / tail)),
+        tail=tail, level=float(constant[best] + height[best] * last), factor=factor,
+    )  # fmt: skip
 
 
 def _sag(x: FloatArray, y: FloatArray, weight: FloatArray, length: float) -> tuple[float, float]:
@@ -253,11 +297,12 @@ def _head(signal_V: FloatArray, span: _Span) -> _Draft:
     )  # fmt: skip
 
 
-def _join(tail: _Draft, head: _Draft, noise_V: float, amplitude_V: float) -> _Draft:
+def _join(tail: _Draft, head: _Draft, noise: Noise, amplitude_V: float) -> _Draft:
     """Join the level after edges with that before the first one; where they differ, the part at rest counts."""
     residuals = (*head.residuals_V, *tail.residuals_V)
     sag = {"sag_V": tail.sag_V, "sag_factor": tail.sag_factor}
-    u = noise_V * float(np.sqrt(tail.factor + head.factor))
+    inflation = noise.inflation(max(tail.neighbours, head.neighbours, 1))
+    u = noise.sigma_V * float(np.sqrt((tail.factor + head.factor) * inflation))
     if abs(tail.level_V - head.level_V) > max(4 * u, 1e-3 * amplitude_V):
         return _Draft(
             level_V=head.level_V, factor=head.factor, neighbours=head.neighbours, residuals_V=residuals, settled=True,
@@ -271,7 +316,7 @@ def _join(tail: _Draft, head: _Draft, noise_V: float, amplitude_V: float) -> _Dr
 
 
 def _peaks(
-    time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise_V: float, levels: StateLevels
+    time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise, levels: StateLevels
 ) -> _Draft:
     """Level of pulses that never settle: the extreme that each reaches, meaned over the pulses."""
     sign = 1.0 if high else -1.0
@@ -279,7 +324,7 @@ def _peaks(
     for span in spans:
         first, last = np.searchsorted(time_s, (span.middle_s, span.next_middle_s))
         part = slice(int(first), max(int(last), int(first) + 2))
-        found.append(peak_level(time_s[part], sign * signal_V[part], noise=noise_V, amplitude=levels.amplitude_V))
+        found.append(peak_level(time_s[part], sign * signal_V[part], noise=noise.sigma_V, amplitude=levels.amplitude_V))
     values = np.array([value for value, _ in found])
     factor = float(np.mean([factor for _, factor in found])) / len(found)
     return _Draft(level_V=sign * float(np.mean(values)), factor=factor, neighbours=1, residuals_V=(), settled=False)
