@@ -17,6 +17,10 @@ ENOUGH_FLAT_SAMPLES = 30
 """Below this many flat samples the noise is known to worse than 13 %, 1 / sqrt(2 (n - 1)), and is called unknown."""
 
 LONGEST_LAG = 256
+"""Lag in samples beyond which no correlation is looked for."""
+
+ENOUGH_TO_CORRELATE = 4096
+"""Samples of one flat part that are enough to tell the correlation."""
 
 FEWEST_CODES, MOST_CODES = 8, 65536
 """Reach of a record, in its smallest steps, between which the smallest step is taken for a code."""
@@ -125,7 +129,7 @@ def flat_noise(residuals_V: Sequence[FloatArray], *, fallback_V: float) -> Noise
     counts = np.zeros(LONGEST_LAG)
     for part in parts:
         _add_lagged_products(part, sums, counts)
-    variance = sums[0] / max(n_flat - len(parts), 1)
+    variance = float(sum(part @ part for part in parts)) / max(n_flat - len(parts), 1)
     if not variance > 0:
         return Noise(sigma_V=0.0, correlation=np.ones(1), n_flat=n_flat)
     rho = np.divide(sums, np.maximum(counts, 1)) / (sums[0] / counts[0])
@@ -134,6 +138,7 @@ def flat_noise(residuals_V: Sequence[FloatArray], *, fallback_V: float) -> Noise
 
 def _add_lagged_products(part: FloatArray, sums: FloatArray, counts: FloatArray) -> None:
     """Add the lagged products of one flat part; the transform does all lags at once."""
+    part = part[:ENOUGH_TO_CORRELATE]
     m = min(LONGEST_LAG, part.size)
     size = 1 << int(part.size + m - 1).bit_length()
     spectrum = np.fft.rfft(part, size)

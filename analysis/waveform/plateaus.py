@@ -18,7 +18,7 @@ SETTLED_RATIO = 2.75
 START_RATIO = 1.5
 """A plateau is used from this many times the 50 to 90 % time after the 50 % point: 3.1 time constants, 1.9 sigma."""
 
-BINS = 512
+BINS = 256
 LEAST_ENTRIES = 8
 """Entries from which an exponential is fitted to a plateau rather than a mean."""
 
@@ -192,8 +192,7 @@ def _tail_fit(time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, h
     each = x.size // len(spans)
     tails = float(np.median([s.late_s for s in spans])) / np.log(5) * _TAIL_FACTORS
     tails = tails[tails >= 2 * length / max(min(bx.size, each), 1)]
-    fits = [_best_tail(bx, by, weight, tails, left_out * length, length) for left_out in LEFT_OUT]
-    fit = _earliest_that_agrees([f for f in fits if f is not None], noise, each)
+    fit = _earliest_that_agrees(_tail_fits(bx, by, weight, tails, length), noise, each)
     sag, sag_factor = _sag(bx, by, weight, length)
     residuals = tuple(_residuals(time_s, signal_V, s, s.middle_s + begin, fit, offset) for s in spans)
     return _Draft(
@@ -235,30 +234,49 @@ def _earliest_that_agrees(fits: list[_Tail], noise: Noise, neighbours: int) -> _
     return fits[-1]
 
 
+def _tail_fits(x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArray, length: float) -> list[_Tail]:
+    """Fits of constant and exponential that leave out more and more of the start, as far as enough is left.
+
+    Linear least squares for each of a row of time constants, of which the one that explains most is kept.
+    """
+    kept = weight * (x >= np.asarray(LEFT_OUT)[:, None] * length)
+    entries = np.count_nonzero(kept, axis=1)
+    shape = np.exp(-x / tails[:, None])
+    s0, y0 = kept.sum(axis=1), kept @ y
+    s1, s2, y1 = kept @ shape.T, kept @ (shape * shape).T, (kept * y) @ shape.T
+    fits = []
+    for k, left_out in enumerate(LEFT_OUT):
+        usable = tails <= (1 - left_out) * length / 2
+        if k and entries[k] < LEAST_ENTRIES:
+            break
+        fits.append(
+            _best_tail(
+                s0[k], s1[k, usable], s2[k, usable], y0[k], y1[k, usable], tails[usable], left_out * length, length
+            )
+            if entries[k] >= LEAST_ENTRIES and bool(np.any(usable))
+            else _Tail(
+                start=left_out * length,
+                constant=y0[k] / s0[k],
+                height=0.0,
+                tail=1.0,
+                level=y0[k] / s0[k],
+                factor=1 / s0[k],
+            )
+        )
+    return fits
+
+
 def _best_tail(
-    x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArray, start: float, length: float
-) -> _Tail | None:
-    """Least squares for each of a row of time constants, the best of which is kept; `None` where too little is left."""
-    used = x >= start
-    x, y, weight = x[used], y[used], weight[used]
-    if start > 0 and x.size < LEAST_ENTRIES:
-        return None
-    s0, y0 = float(np.sum(weight)), float(weight @ y)
-    tails = tails[tails <= (length - start) / 2]
-    if tails.size == 0 or x.size < LEAST_ENTRIES:
-        mean = y0 / s0
-        return _Tail(start=start, constant=mean, height=0.0, tail=1.0, level=mean, factor=1 / s0)
-    shape = np.exp(-(x - start) / tails[:, None])
-    s1, s2, y1 = shape @ weight, (shape * shape) @ weight, shape @ (weight * y)
+    s0: float, s1: FloatArray, s2: FloatArray, y0: float, y1: FloatArray, tails: FloatArray, start: float, length: float
+) -> _Tail:
     determinant = np.maximum(s0 * s2 - s1 * s1, 1e-12 * s0 * s2)
     constant, height = (s2 * y0 - s1 * y1) / determinant, (s0 * y1 - s1 * y0) / determinant
-    best = int(np.argmax(constant * y0 + height * y1))  # what the fit explains: most where the residuals are least
-    tail = float(tails[best])
-    last = float(np.exp(-(length - start) / tail))
-    factor = float((s2[best] - 2 * s1[best] * last + s0 * last**2) / determinant[best])
+    best = int(np.argmax(constant * y0 + height * y1))
+    last = float(np.exp(-length / tails[best]))
+    factor = (s2[best] - 2 * s1[best] * last + s0 * last**2) / determinant[best]
     return _Tail(
-        start=start, constant=float(constant[best]), height=float(height[best]) * float(np.exp(start / tail)),
-        tail=tail, level=float(constant[best] + height[best] * last), factor=factor,
+        start=start, constant=float(constant[best]), height=float(height[best]), tail=float(tails[best]),
+        level=float(constant[best] + height[best] * last), factor=float(factor),
     )  # fmt: skip
 
 
