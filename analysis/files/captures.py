@@ -41,7 +41,7 @@ def read_capture(path: Path, *, name: str | None = None, channels: ChannelRoles 
     text = read_text(path)
     try:
         return parse_capture(text, name=name) if is_own(text) else parse_foreign(text, name=name, channels=channels)
-    except CaptureError as error:
+    except InputError as error:
         raise CaptureError(
             error.what,
             where=f"{path}, {error.where}" if error.where else str(path),

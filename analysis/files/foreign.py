@@ -140,43 +140,62 @@ def _time_places(table: _Table) -> tuple[list[int], list[int]]:
     counting = [p for p in range(len(columns)) if p not in stated and _counts(table.values[:, p])]
     if stated:
         return stated, counting
-    times = _telling(table, [p for p in range(len(columns)) if p not in counting])
     step_is_stated = table.layout.increment_s is not None or stated_steps(table.layout.settings, only_named=True)
-    if not times and not counting and not step_is_stated:
-        raise _no_time(table)
+    others = [p for p in range(len(columns)) if p not in counting]
+    # Times need a channel beside them: a lone column is that channel, even where it rises.
+    bare = [p for p in others if columns[p].unit is None] if len(others) > 1 else []
+    times = _even_places(table, bare)
+    if not times and not (counting and step_is_stated):
+        times = _rising_place(table, bare)
+    if not times and not step_is_stated:
+        _refuse_other_axes(table, others)
+        if not counting:
+            raise _no_time(table)
     for place in times:
-        unit, name = columns[place].unit, columns[place].name
-        if unit is not None or _OTHER_NAMES.match(name):
-            raise CaptureError(
-                "not a waveform: the column that rises is no time", where=f"{table.heading}, {table.called(place)}",
-                found=unit.text if unit is not None else name, wanted=_WAVEFORM,
-            )  # fmt: skip
+        if _OTHER_NAMES.match(columns[place].name):
+            raise _other_axis(table, place, columns[place].name)
     return times, counting
 
 
-def _telling(table: _Table, places: Sequence[int]) -> list[int]:
-    """The columns that rise evenly; where none does, the one that rises, told by its name where several do."""
-    n_columns = len(table.layout.columns)
+def _refuse_other_axes(table: _Table, places: Sequence[int]) -> None:
+    for place in places:
+        unit = table.layout.columns[place].unit
+        if unit is not None and _is_rising(table.values[:, place]):
+            raise _other_axis(table, place, unit.text)
+
+
+def _other_axis(table: _Table, place: int, found: str) -> CaptureError:
+    return CaptureError(
+        "not a waveform: the column that rises is no time",
+        where=f"{table.heading}, {table.called(place)}",
+        found=found,
+        wanted=_WAVEFORM,
+    )
+
+
+def _even_places(table: _Table, places: Sequence[int]) -> list[int]:
+    """The column that rises evenly; of several, the one with a name of time, or each block's first."""
     even = [p for p in places if _is_even(table.values[:, p])]
-    if len(even) > 1:
-        before_a_channel = [p for p in even if p + 1 < n_columns and p + 1 not in even]
-        return _blocks(table, before_a_channel)
-    if even:
+    if len(even) < 2:
         return even
+    named = [p for p in even if _TIME_NAMES.match(table.layout.columns[p].name)]
+    if len(named) == 1:
+        return named
+    distances = {b - a for a, b in pairwise(even)}
+    if even[0] == 0 and len(distances) == 1 and distances != {1} and even[-1] + 1 < len(table.layout.columns):
+        return even
+    raise _several(table, even)
+
+
+def _rising_place(table: _Table, places: Sequence[int]) -> list[int]:
+    """The column that rises; of several, the one with a name of time."""
     rising = [p for p in places if _is_rising(table.values[:, p])]
+    if len(rising) < 2:
+        return rising
     named = [p for p in rising if _TIME_NAMES.match(table.layout.columns[p].name)]
-    if len(rising) > 1 and len(named) != 1:
+    if len(named) != 1:
         raise _several(table, rising)
-    return named if len(rising) > 1 else rising
-
-
-def _blocks(table: _Table, places: Sequence[int]) -> list[int]:
-    """Several even columns are the times of several blocks where they stand at equal distances."""
-    distances = {b - a for a, b in pairwise(places)}
-    starts_left = places and places[0] == 0
-    if len(places) == 1 or (starts_left and len(distances) == 1):
-        return list(places)
-    raise _several(table, places)
+    return named
 
 
 def _several(table: _Table, places: Sequence[int]) -> CaptureError:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from enum import StrEnum
 
@@ -59,11 +59,13 @@ _WHOLE: Mapping[str, WrittenUnit] = {
     }.items()
     for text in texts
 }
-_BRACKETS = re.compile(r"^(?P<name>.*?)\s*[(\[](?P<unit>[^()\[\]]+)[)\]]\s*$")
+_LETTERS = (Dimension.TIME, Dimension.VOLTAGE)
+_UNDERSCORE = re.compile(r"^(?P<name>.+)_(?P<unit>[^\W_]+)$")
 _BEHIND = (
+    re.compile(r"^(?P<name>.*?)\s*[(\[](?P<unit>[^()\[\]]+)[)\]]\s*$"),
     re.compile(r"^(?P<name>.*?)\bin\s+(?P<unit>\S+)$"),
     re.compile(r"^(?P<name>.*?)\s*/\s*(?P<unit>[^\s/]+)$"),
-    re.compile(r"^(?P<name>.+)_(?P<unit>[^\W_]+)$"),
+    _UNDERSCORE,
 )
 
 
@@ -77,8 +79,7 @@ def read_unit(text: str) -> WrittenUnit | None:
         return _WHOLE[text]
     for symbol, dimension in _SYMBOLS.items():
         prefix = text.removesuffix(symbol)
-        # `m` alone would be the metre and the milli: only the bare metre is read.
-        if text.endswith(symbol) and prefix in _PREFIXES and not (symbol == "m" and prefix):
+        if text.endswith(symbol) and prefix in _PREFIXES:
             return WrittenUnit(text=text, dimension=dimension, scale=_PREFIXES[prefix])
     word = re.sub(r"\d+$", "", text.casefold())
     for name, dimension in _WORDS.items():
@@ -90,20 +91,19 @@ def read_unit(text: str) -> WrittenUnit | None:
 def split_unit(cell: str) -> tuple[str, WrittenUnit | None]:
     """Split a column's heading into name and unit: `Time (s)`, `C1 in V`, `U / mV`, `drive_V`, `V`.
 
-    A heading that is a unit and nothing else is both.
+    A heading that is a unit and nothing else is both. A lone letter without brackets is a unit only as `s` or `V`:
+    channels are called `A`, `C` or `ch_A` too.
     """
+    cell = cell.strip()
     alone = read_unit(cell)
-    if alone is not None:
-        return cell.strip(), alone
-    for match in _matches(cell.strip()):
-        unit = read_unit(match["unit"])
-        if unit is not None:
-            return match["name"].strip(), unit
-    return cell.strip(), None
-
-
-def _matches(cell: str) -> Iterator[re.Match[str]]:
-    for pattern in (_BRACKETS, *_BEHIND):
+    if alone is not None and (len(cell) > 1 or alone.dimension in _LETTERS):
+        return cell, alone
+    for pattern in _BEHIND:
         match = pattern.match(cell)
-        if match is not None:
-            yield match
+        unit = read_unit(match["unit"]) if match is not None else None
+        if match is None or unit is None:
+            continue
+        if pattern is _UNDERSCORE and len(unit.text) == 1 and unit.dimension not in _LETTERS:
+            continue
+        return match["name"].strip(), unit
+    return cell, None
