@@ -64,6 +64,8 @@ class JunctionFit:
     that the model has, each with `value`, `u`, `lo95`, `hi95`. `fixed` names the parameters that were given
     (stray from the fixture), not fitted. `extra_rise_s`, `extra_fall_s` are the 10-90 % times of what does not
     depend on the load (emitter, transit, scope), `None` where the fit has none. `chi2_per_dof` judges the fit.
+    `curve` holds the numbers that draw C(V), those whose interval does not close among them: for drawing and
+    predicting between the biases measured, not for quoting.
     """
 
     device: str | None
@@ -79,3 +81,4 @@ class JunctionFit:
     chi2_per_dof: float | None = None
     flags: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
+    curve: Mapping[str, float] = field(default_factory=dict)
