@@ -149,7 +149,10 @@ def _json_records(path: Path) -> list[tuple[str, dict[str, object]]]:
 
 def _csv_records(path: Path) -> list[tuple[str, dict[str, object]]]:
     text = _text(path)
-    header = next((line for line in text.splitlines() if line.strip()), "")
+    above = len(text) - len(text.lstrip("\r\n"))
+    first_line = 1 + text[:above].replace("\r\n", "\n").count("\n")
+    text = text[above:]
+    header = text.partition("\n")[0]
     separator = max(",;\t", key=header.count)
     try:
         with warnings.catch_warnings():
@@ -160,13 +163,13 @@ def _csv_records(path: Path) -> list[tuple[str, dict[str, object]]]:
             )  # fmt: skip
     except (pd.errors.ParserError, pd.errors.EmptyDataError, pd.errors.ParserWarning) as error:
         raise InputError("not a table", where=str(path), found=str(error).strip()) from error
-    return _with_places(frame, str(path))
+    return _with_places(frame, first_line, str(path))
 
 
-def _with_places(frame: pd.DataFrame, where: str) -> list[tuple[str, dict[str, object]]]:
+def _with_places(frame: pd.DataFrame, first_line: int, where: str) -> list[tuple[str, dict[str, object]]]:
     """Rows under the first line that is not empty, each with its line number; empty columns and lines left out."""
     cells = [[str(cell).strip() for cell in row] for row in frame.fillna("").to_numpy().tolist()]
-    filled = [(number, row) for number, row in enumerate(cells, start=1) if any(row)]
+    filled = [(number, row) for number, row in enumerate(cells, start=first_line) if any(row)]
     if not filled:
         return []
     names = filled[0][1]

@@ -13,6 +13,7 @@ from darkedge.analysis.errors import CaptureError
 EVEN_RATIO = 0.01
 """Steps within 1 % of their median are even."""
 
+_LAST_BITS = 64
 _SAME_RATIO = 1e-6
 
 
@@ -71,19 +72,41 @@ def time_axis(stamps_s: FloatArray, *, quantum_s: float = 0.0, increments_s: Seq
 
 
 def even_step(stamps_s: FloatArray) -> float:
-    """Step of even stamps: the shortest decimal that gives every stamp to the last bits, else span over steps."""
+    """Step of even stamps, without the noise of their last digits.
+
+    Of stamps that are printed short, the step is the shortest decimal that gives them all within a few last bits. Of
+    stamps that are printed in full it is the one that gives them to the last bit. Where there is none, it is the span
+    over the number of steps.
+    """
     n = stamps_s.size - 1
-    t0_s, mean = float(stamps_s[0]), float(stamps_s[-1] - stamps_s[0]) / n
-    tolerance = 4 * float(np.spacing(np.max(np.abs(stamps_s))))
-    index = np.arange(n + 1, dtype=np.float64)
-    for digits in range(1, 17):
-        step = float(f"{mean:.{digits}g}")
-        # The last stamp first: it decides nearly always, and costs nothing.
-        if abs(t0_s + n * step - stamps_s[-1]) > tolerance:
-            continue
-        if bool(np.all(np.abs(t0_s + index * step - stamps_s) <= tolerance)):
+    mean = float(stamps_s[-1] - stamps_s[0]) / n
+    decimals = [float(f"{mean:.{digits}g}") for digits in range(1, 18)]
+    if _printed_in_full(stamps_s):
+        # The last stamp is rounded too, by many of the step's last bits where the record starts far from zero.
+        last_bit = float(np.spacing(mean))
+        for step in [*decimals, *(mean + bits * last_bit for bits in range(-_LAST_BITS, _LAST_BITS + 1))]:
+            if _gives(step, stamps_s, 0.0):
+                return step
+    rounding = 4 * float(np.spacing(np.max(np.abs(stamps_s))))
+    for step in decimals:
+        if _gives(step, stamps_s, rounding):
             return step
     return mean
+
+
+def _printed_in_full(stamps_s: FloatArray) -> bool:
+    """Whether stamps have more than the 15 digits that a decimal keeps in a float: told from a few of them."""
+    few = stamps_s[np.linspace(0, stamps_s.size - 1, 16).astype(np.intp)].tolist()
+    return any(float(f"{stamp:.15g}") != stamp for stamp in few)
+
+
+def _gives(step_s: float, stamps_s: FloatArray, tolerance_s: float) -> bool:
+    n, t0_s = stamps_s.size - 1, stamps_s[0]
+    # The last stamp first: it decides nearly always, and costs nothing.
+    if not abs(t0_s + step_s * n - stamps_s[-1]) <= tolerance_s:
+        return False
+    grid = t0_s + step_s * np.arange(n + 1, dtype=np.float64)
+    return bool(np.all(np.abs(grid - stamps_s) <= tolerance_s))
 
 
 def _stated_grid(stamps_s: FloatArray, quantum_s: float, increments_s: Sequence[float]) -> TimeAxis | None:
