@@ -4,7 +4,8 @@ from __future__ import annotations
 
 from bisect import bisect_left
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from datetime import date, datetime
 
 from darkedge.analysis.captures import Capture, Conditions, Kind
 from darkedge.analysis.dark.traces import TraceSummary, dark_current, summarise_trace
@@ -55,7 +56,10 @@ def refused_measurement(name: str) -> Measurement:
 
 
 def measure_captures(
-    captures: Iterable[Capture], *, fixture_for: FixtureFor = lambda _name: UNKNOWN_FIXTURE
+    captures: Iterable[Capture],
+    *,
+    fixture_for: FixtureFor = lambda _name: UNKNOWN_FIXTURE,
+    today: date | None = None,
 ) -> tuple[list[Measurement], list[Failure]]:
     """Measure many captures; never raises for one of them.
 
@@ -69,6 +73,9 @@ def measure_captures(
         Read one at a time.
     fixture_for : callable
         The fixture that holds for a capture, by name.
+    today : date, optional
+        A fixture that had expired when a capture was taken is flagged; this day stands in for captures that do not say
+        when they were taken.
 
     Returns
     -------
@@ -94,7 +101,22 @@ def measure_captures(
             rows.append(refused_measurement(capture.name))
     for place, measurement in _still_measurements(still, fixture_for):
         rows[place] = measurement
-    return [row for row in rows if row is not None], failures
+    return [_with_expiry(row, fixture_for(row.capture), today) for row in rows if row is not None], failures
+
+
+def _with_expiry(row: Measurement, fixture: Fixture, today: date | None) -> Measurement:
+    day = _taken_on(row.conditions) or today
+    if day is None or not fixture.expired(day) or "refused" in row.flags:
+        return row
+    return replace(row, flags=(*row.flags, "fixture_expired"))
+
+
+def _taken_on(conditions: Conditions) -> date | None:
+    """The day a capture was taken, `None` where it does not say."""
+    try:
+        return None if conditions.taken_utc is None else datetime.fromisoformat(conditions.taken_utc).date()
+    except ValueError:
+        return None
 
 
 def _summaries(capture: Capture, place: int) -> list[_Still]:

@@ -65,17 +65,20 @@ def choose(
     light = _light(fit, measurements, fixture, wish)
     low, high = float(light.bias_V[0]), float(light.bias_V[-1])
     rails = wish.rails_V or tuple(float(b) for b in np.unique(light.bias_V))
-    inside = [r for r in rails if low * 0.98 <= r <= high * 1.02]
+    allowed = [r for r in rails if wish.max_bias_V is None or r <= wish.max_bias_V]
+    inside = [r for r in allowed if low * 0.98 <= r <= high * 1.02]
     notes = [
         f"{format_quantity(r, 'V')} lies outside the biases measured ({low:g} to {high:g} V) and was not judged."
-        for r in rails
+        for r in allowed
         if r not in inside
     ]
+    if len(allowed) < len(rails):
+        notes.append(f"Biases beyond {format_quantity(wish.max_bias_V, 'V')} were left out, as asked.")
     if not inside:
         raise FitError(
             "no rail lies within the biases measured",
             where=fit.device or "unnamed device",
-            found=", ".join(f"{r:g} V" for r in rails),
+            found=", ".join(f"{r:g} V" for r in allowed) or "no rail within the rating given",
             wanted=f"{low:g} to {high:g} V",
             mend="measure at the rails that exist",
         )
@@ -255,8 +258,6 @@ def _misses(point: OperatingPoint, wish: Wish) -> list[tuple[str, float]]:
     signal = _value(point.signal_V)
     if wish.min_signal_V is not None and signal < wish.min_signal_V:
         found.append((f"signal {format_quantity(signal, 'V')}", math.log(wish.min_signal_V / max(signal, 1e-12))))
-    if wish.max_bias_V is not None and point.bias_V > wish.max_bias_V:
-        found.append((f"beyond {format_quantity(wish.max_bias_V, 'V')}", 10 + math.log(point.bias_V / wish.max_bias_V)))
     if signal > MOST_SWING_RATIO * point.bias_V:
         found.append(("the signal uses up the bias", math.log(signal / (MOST_SWING_RATIO * point.bias_V))))
     return found + _dark_miss(point, wish)
@@ -268,10 +269,7 @@ def _dark_miss(point: OperatingPoint, wish: Wish) -> list[tuple[str, float]]:
     dark = point.dark_current_A
     if dark is None:
         return [("dark current not known here", 5.0)]
-    if dark.value is None or dark.u is None:
-        highest = dark.hi95
-    else:
-        highest = dark.value + ONE_SIDED_95 * dark.u
+    highest = dark.hi95 if dark.value is None or dark.u is None else dark.value + ONE_SIDED_95 * dark.u
     if highest is None:
         return [("dark current not known here", 5.0)]
     if highest <= wish.dark_current_A:

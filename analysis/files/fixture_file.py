@@ -15,8 +15,8 @@ from darkedge.analysis.measurement import Estimate
 
 FORMAT = "darkedge-fixture 1"
 
-EdgeTime = Callable[[Path, str], Estimate]
-"""Measures a captured reference edge: the file, and `rise_time_s` or `fall_time_s`."""
+EdgeTime = Callable[[Path, str], Estimate | None]
+"""Measures a captured reference edge: the file, and `rise_time_s` or `fall_time_s`; `None` where it has no such edge."""
 
 
 class _Load(Checked):
@@ -118,6 +118,6 @@ def _edge(
     if edge_time is None:
         raise FixtureError("reference captures cannot be measured here", where=f"{path}, {key}")
     estimate = edge_time(path.parent / str(capture), quantity)
-    if estimate.value is None or estimate.u is None:
+    if estimate is None or estimate.value is None or estimate.u is None:
         raise FixtureError("the reference capture has no such edge", where=f"{path}, {key}", found=str(capture))
     return estimate.value, estimate.u

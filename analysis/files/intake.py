@@ -1,0 +1,206 @@
+"""The way in that every command shares: from paths to measurements, with what was refused and why."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
+from datetime import date
+from pathlib import Path
+
+from darkedge.analysis.captures import Capture, Conditions
+from darkedge.analysis.errors import CaptureError, DarkedgeError, FixtureError, InputError
+from darkedge.analysis.files.captures import read_capture
+from darkedge.analysis.files.conditions import ConditionsTable, read_conditions
+from darkedge.analysis.files.fixture_file import read_fixture
+from darkedge.analysis.files.gather import Source, find_captures
+from darkedge.analysis.files.load import Refusal, load_captures
+from darkedge.analysis.files.names import NamePattern
+from darkedge.analysis.files.roles import ChannelRoles
+from darkedge.analysis.files.runs import RunContext, read_run_context
+from darkedge.analysis.files.tables import is_table, read_table
+from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
+from darkedge.analysis.measurement import Estimate, Measurement
+from darkedge.analysis.measuring import measure_captures, refused_measurement
+from darkedge.analysis.waveform.measure import measure_pulse_capture
+
+Progress = Callable[[int, int], None]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Refused:
+    """A file that gave no measurement, with the reason."""
+
+    name: str
+    error: DarkedgeError
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Intake:
+    """What the paths held.
+
+    `measurements` has a row for every capture and element, in the order found; a refused file has one row with the
+    flag `refused`, and its reason stands in `refusals`. `sources` finds a capture's file again by its name.
+    """
+
+    measurements: tuple[Measurement, ...]
+    refusals: tuple[Refused, ...] = ()
+    sources: Mapping[str, Source] = field(default_factory=dict)
+    fixtures: Mapping[str, Fixture] = field(default_factory=dict)
+    contexts: tuple[RunContext, ...] = ()
+    reread: Callable[[str], Capture] | None = None
+
+    @property
+    def exit_status(self) -> int:
+        """2 where a file was refused, else 0: a batch does all it can and says so at the end."""
+        return 2 if self.refusals else 0
+
+    def fixture_for(self, capture: str) -> Fixture:
+        """The fixture that holds for a capture."""
+        return self.fixtures.get(capture, UNKNOWN_FIXTURE)
+
+
+def take_in(
+    paths: Sequence[Path],
+    *,
+    names: str | None = None,
+    conditions: Path | None = None,
+    fixture: Path | None = None,
+    channels: str | None = None,
+    today: date,
+    progress: Progress | None = None,
+) -> Intake:
+    """Read and measure everything under the paths.
+
+    Captures, folders, runs and lots are measured; a saved measurement table is taken as it is. The fixture of a capture is that given
+    here, else the one that the plan of its run names.
+
+    Parameters
+    ----------
+    names, channels : str, optional
+        Pattern of the file names, roles of the channels, as the options of the same name.
+    conditions, fixture : Path, optional
+        Table of conditions; fixture file for all captures.
+    today : date
+        Tells an expired fixture where a capture does not say when it was taken.
+    progress : callable, optional
+        Called with the captures done and the number of all.
+
+    Raises
+    ------
+    InputError
+        The request as a whole is wrong: a path that is not there, a pattern, table, plan or fixture that is wrong.
+    """
+    pattern = None if names is None else NamePattern(names)
+    roles = None if channels is None else ChannelRoles.parse(channels)
+    stated = None if conditions is None else read_conditions(conditions)
+    given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time)
+    tables = [path for path in paths if path.is_file() and is_table(path)]
+    rest = [path for path in paths if path not in tables]
+    if tables and (pattern or stated):
+        raise InputError(
+            "a saved table has its conditions already",
+            where=str(tables[0]),
+            mend="give --names and --conditions with captures, or correct the table",
+        )
+    rows = [row for table in tables for row in read_table(table)]
+    reading = _Reading(find_captures(rest) if rest else [], pattern, stated, roles, given)
+    measured, failures = measure_captures(
+        reading.captures(progress), fixture_for=lambda name: reading.fixtures.get(name, UNKNOWN_FIXTURE), today=today
+    )
+    refused = [Refused(name=r.name, error=r.error) for r in reading.refusals]
+    refused += [Refused(name=f.capture, error=f.error.at(f.capture)) for f in failures]
+    order = {name: place for place, name in enumerate(reading.sources)}
+    measured += [refused_measurement(r.name) for r in reading.refusals]
+    measured.sort(key=lambda m: order[m.capture])
+    rows += measured
+    fixtures = dict(reading.fixtures)
+    if given is not None:
+        fixtures |= {row.capture: given for row in rows}
+    return Intake(
+        measurements=tuple(rows),
+        refusals=tuple(refused),
+        sources=reading.sources,
+        fixtures=fixtures,
+        contexts=tuple(reading.contexts.values()),
+        reread=reading.again,
+    )
+
+
+class _Reading:
+    """Captures one after another, each with the context of its run; refusals and fixtures collect on the way."""
+
+    def __init__(
+        self,
+        sources: Sequence[Source],
+        pattern: NamePattern | None,
+        stated: ConditionsTable | None,
+        roles: ChannelRoles | None,
+        given: Fixture | None,
+    ) -> None:
+        self.sources = {source.name: source for source in sources}
+        self.pattern, self.stated, self.roles, self.given = pattern, stated, roles, given
+        self.refusals: list[Refusal] = []
+        self.fixtures: dict[str, Fixture] = {}
+        self.contexts: dict[Path, RunContext] = {}
+        for source in sources:
+            folder = source.run_folder
+            if folder is not None and folder not in self.contexts:
+                self.contexts[folder] = read_run_context(folder, edge_time=_edge_time)
+            fixture = given or (None if folder is None else self.contexts[folder].fixture)
+            if fixture is not None:
+                self.fixtures[source.name] = fixture
+
+    def captures(self, progress: Progress | None) -> Iterator[Capture]:
+        for done, item in enumerate(self._load(list(self.sources.values())), start=1):
+            if isinstance(item, Refusal):
+                self.refusals.append(item)
+            else:
+                try:
+                    yield self._in_its_run(item)
+                except CaptureError as error:
+                    self.refusals.append(Refusal(name=item.name, error=error))
+            if progress is not None:
+                progress(done, len(self.sources))
+
+    def again(self, name: str) -> Capture:
+        """Read one capture again, for a picture of it."""
+        item = next(iter(self._load([self.sources[name]])))
+        if isinstance(item, Refusal):
+            raise item.error
+        return self._in_its_run(item)
+
+    def _load(self, sources: Sequence[Source]) -> Iterator[Capture | Refusal]:
+        return load_captures(sources, names=self.pattern, conditions=self.stated, channels=self.roles)
+
+    def _in_its_run(self, capture: Capture) -> Capture:
+        """Join what the plan and the lot file say with what the capture says."""
+        folder = self.sources[capture.name].run_folder
+        if folder is None:
+            return capture
+        context = self.contexts[folder]
+        plan, lot = context.plan, context.lot
+        beside = Conditions(
+            run=None if capture.conditions.run is not None else folder.name,
+            lot=None if lot is None else lot.lot,
+            device_kind=None if plan is None else plan.device.kind,
+            output_connection=None if plan is None else plan.device.output_connection,
+        )
+        joined = capture.conditions.merged(beside, here=capture.name, there=f"the plan or lot file of {folder.name}")
+        return Capture(
+            name=capture.name,
+            outputs=capture.outputs,
+            drive=capture.drive,
+            conditions=joined,
+            remarks=capture.remarks,
+        )
+
+
+def _edge_time(path: Path, quantity: str) -> Estimate | None:
+    """Measure one edge of a captured reference response."""
+    try:
+        rows = measure_pulse_capture(read_capture(path))
+    except CaptureError as error:
+        raise FixtureError(
+            error.what, where=error.where, found=error.found, wanted=error.wanted, mend=error.mend
+        ) from error
+    return rows[0].quantities.get(quantity)
