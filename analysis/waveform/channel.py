@@ -20,8 +20,11 @@ from darkedge.analysis.waveform.levels import StateLevels, histogram_levels
 from darkedge.analysis.waveform.noise import Noise, code_step_V, difference_sigma
 from darkedge.analysis.waveform.plateaus import Plateau, Refined, refine_levels
 
-LEAST_SIGNAL_TO_NOISE = 4.0
+LEAST_SIGNAL_TO_NOISE = 5.0
 """Amplitude over noise below which no pulse is claimed."""
+
+LEAST_WIDTH = 3
+"""Samples that pulses, and the gaps between them, last at least in the median; what is shorter is noise or a glitch."""
 
 LEAST_CODES = 2.0
 """Amplitude in codes of the digitiser below which no pulse is claimed."""
@@ -75,7 +78,7 @@ def measure_channel(
         return None
     levels, changes = first
     refined = _refined(time, signal, levels, changes, noise_V, step)
-    if refined is None or not _settled_somewhere(refined, changes):
+    if refined is None or _is_drift(refined, changes):
         return None
     transitions = locate_crossings(
         time,
@@ -102,7 +105,13 @@ def _first_look(signal_V: FloatArray, noise_V: float) -> tuple[StateLevels, Chan
         if levels is None:
             return None
     changes = find_changes(signal_V, levels, smooth=smooth)
-    return (levels, changes) if changes.index.size else None
+    return (levels, changes) if changes.index.size and not _is_flicker(changes) else None
+
+
+def _is_flicker(changes: Changes) -> bool:
+    lasting = np.diff(changes.index)
+    states = (lasting[0::2], lasting[1::2])
+    return any(state.size > 0 and float(np.median(state)) < LEAST_WIDTH for state in states)
 
 
 def _refined(
@@ -128,9 +137,10 @@ def _refined(
     return refined
 
 
-def _settled_somewhere(refined: Refined, changes: Changes) -> bool:
-    """A lone edge between two states neither of which settles is a drift, not a pulse."""
-    return changes.index.size > 1 or refined.low.settled or refined.high.settled
+def _is_drift(refined: Refined, changes: Changes) -> bool:
+    """A lone edge out of a state that never was at rest is a drift or a decay, not an edge between two states."""
+    before = refined.low if changes.rising[0] else refined.high
+    return changes.index.size == 1 and not before.settled
 
 
 def _with_codes(noise: Noise, step_V: float) -> Noise:

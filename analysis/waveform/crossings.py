@@ -45,6 +45,9 @@ LEAST_IN_WINDOW = 5
 FARTHEST_MOVE = 0.6
 """How far a crossing may end from where it was roughly found, in edge times; farther, the fit has gone astray."""
 
+LEAST_VARIANCE_RATIO = 0.05
+"""Variance of a crossing over that under white noise of the same size, below which no correlation is believed."""
+
 CHECK_BINS = 10
 """Parts into which residuals are lumped to see whether a shape fits."""
 
@@ -365,13 +368,16 @@ def _variance(gain: FloatArray, noise: Noise, group: IntArray) -> FloatArray:
 
 def _covariance(gain: FloatArray, noise: Noise, group: IntArray) -> FloatArray:
     """Covariance of sums of entries with the given gains (n, k, m), in units of one sample's variance; (n, k, k)."""
+    white = np.asarray((gain @ gain.transpose(0, 2, 1)) / group[:, None, None])
     if noise.correlation.size == 1:
-        return (gain @ gain.transpose(0, 2, 1)) / group[:, None, None]
+        return white
     result = np.empty((gain.shape[0], gain.shape[1], gain.shape[1]))
     for size in np.unique(group):
         rows = group == size
         between = toeplitz(_correlation_of_means(noise.correlation, int(size), gain.shape[2]))
         result[rows] = gain[rows] @ between @ gain[rows].transpose(0, 2, 1)
+    # An estimated correlation, cut off where it drowns, may promise less than any noise can keep.
+    result += np.maximum(LEAST_VARIANCE_RATIO * white - result, 0.0) * np.eye(gain.shape[1])
     return result
 
 

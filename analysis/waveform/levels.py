@@ -9,6 +9,9 @@ import numpy as np
 from darkedge.analysis.captures import FloatArray
 
 BINS = 256
+FLAT_RATIO = 1e-9
+"""Range over magnitude below which a record is flat: what is left is the rounding of the numbers."""
+
 PLATEAU_SHARE = 0.25
 """Share of a half's samples near its mode that makes the mode a state; a ramp or a decaying tail has less."""
 
@@ -52,7 +55,7 @@ def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | 
     """
     values = running_mean(signal_V, smooth)
     bottom, top = float(np.min(values)), float(np.max(values))
-    if not top > bottom:
+    if top - bottom <= FLAT_RATIO * max(abs(top), abs(bottom)):
         return None
     counts, _ = np.histogram(values, bins=BINS, range=(bottom, top))
     low = _mode_of_half(values, counts[: BINS // 2], bottom, top, extreme=bottom, offset=0)

@@ -18,6 +18,9 @@ SETTLED_RATIO = 2.75
 START_RATIO = 1.5
 """A plateau is used from this many times the 50 to 90 % time after the 50 % point: 3.1 time constants, 1.9 sigma."""
 
+HEAD_RATIO = 0.3
+"""Length of the part before the first edge, in 10 to 90 % times of that edge, from which it counts as at rest."""
+
 BINS = 256
 LEAST_ENTRIES = 8
 """Entries from which an exponential is fitted to a plateau rather than a mean."""
@@ -70,6 +73,7 @@ class _Span:
     after_edge: bool
     before_edge: bool
     next_middle_s: float
+    next_edge_s: float
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -147,11 +151,13 @@ def _spans(time_s: FloatArray, changes: Changes, crossings_s: FloatArray) -> lis
     middles = np.concatenate(([time_s[0]], middle, [time_s[-1]]))
     lates = np.concatenate(([0.0], late))
     highs = np.concatenate(([not changes.rising[0]], changes.rising))
+    edges = np.concatenate((crossings_s[:, 2] - crossings_s[:, 0], [0.0]))
     count = highs.size
     return [
         _Span(
             start=int(starts[k]), stop=int(stops[k]), high=bool(highs[k]), middle_s=float(middles[k]),
             late_s=float(lates[k]), after_edge=k > 0, before_edge=k < count - 1, next_middle_s=float(middles[k + 1]),
+            next_edge_s=float(edges[k]),
         )
         for k in range(count)
     ]  # fmt: skip
@@ -161,7 +167,7 @@ def _draft(
     time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise, levels: StateLevels
 ) -> _Draft:
     after = [s for s in spans if s.after_edge]
-    heads = [s for s in spans if not s.after_edge and s.stop - s.start >= 2]
+    heads = [s for s in spans if not s.after_edge and _is_head(time_s, s)]
     settled = [s for s in after if _settles(time_s, s)]
     if settled:
         tail = _tail_fit(time_s, signal_V, settled, high=high, noise=noise)
@@ -170,6 +176,12 @@ def _draft(
     if heads and not whole:
         return _head(signal_V, heads[0])
     return _peaks(time_s, signal_V, whole or after or spans, high=high, noise=noise, levels=levels)
+
+
+def _is_head(time_s: FloatArray, span: _Span) -> bool:
+    """Whether the part before the first edge is long enough, against that edge's own time, to be called at rest."""
+    enough = span.stop - span.start >= 2
+    return enough and bool(time_s[span.stop - 1] - time_s[span.start] >= HEAD_RATIO * span.next_edge_s)
 
 
 def _settles(time_s: FloatArray, span: _Span) -> bool:
@@ -190,9 +202,10 @@ def _tail_fit(time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, h
     length = max(end - begin, 1e-300)
     bx, by, weight = _binned(x - begin, y)
     each = x.size // len(spans)
-    tails = float(np.median([s.late_s for s in spans])) / np.log(5) * _TAIL_FACTORS
+    own = float(np.median([s.late_s for s in spans])) / np.log(5)  # time constant, were the edge one pole
+    tails = own * _TAIL_FACTORS
     tails = tails[tails >= 2 * length / max(min(bx.size, each), 1)]
-    fit = _earliest_that_agrees(_tail_fits(bx, by, weight, tails, length), noise, each)
+    fit = _earliest_that_agrees(_tail_fits(bx, by, weight, tails, length, own), noise, each)
     sag, sag_factor = _sag(bx, by, weight, length)
     residuals = tuple(_residuals(time_s, signal_V, s, s.middle_s + begin, fit, offset) for s in spans)
     return _Draft(
@@ -234,7 +247,9 @@ def _earliest_that_agrees(fits: list[_Tail], noise: Noise, neighbours: int) -> _
     return fits[-1]
 
 
-def _tail_fits(x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArray, length: float) -> list[_Tail]:
+def _tail_fits(
+    x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArray, length: float, own: float
+) -> list[_Tail]:
     """Fits of constant and exponential that leave out more and more of the start, as far as enough is left.
 
     Linear least squares for each of a row of time constants, of which the one that explains most is kept.
@@ -246,7 +261,8 @@ def _tail_fits(x: FloatArray, y: FloatArray, weight: FloatArray, tails: FloatArr
     s1, s2, y1 = kept @ shape.T, kept @ (shape * shape).T, (kept * y) @ shape.T
     fits = []
     for k, left_out in enumerate(LEFT_OUT):
-        usable = tails <= (1 - left_out) * length / 2
+        # Longer tails pass for a slope; but the edge's own must be among them however short the plateau is.
+        usable = tails <= max((1 - left_out) * length / 2, 1.2 * own)
         if k and entries[k] < LEAST_ENTRIES:
             break
         fits.append(
