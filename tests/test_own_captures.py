@@ -97,8 +97,8 @@ class TestReading:
         assert capture.remarks == ()
 
     @pytest.mark.parametrize("end", ["\r\n", "\r"])
-    def test_line_ends_mark_and_missing_last_line_end_do_not_matter(self, tmp_path: Path, end: str) -> None:
-        text = "\ufeff" + TEXT.rstrip("\n").replace("\n", end)
+    def test_line_ends_and_byte_order_mark_do_not_matter(self, tmp_path: Path, end: str) -> None:
+        text = "\ufeff" + TEXT.replace("\n", end)
         assert_same(read_text(tmp_path, text), read_text(tmp_path, TEXT))
 
     def test_zero_volts_per_code_is_not_known(self, tmp_path: Path) -> None:
@@ -155,7 +155,7 @@ class TestRefusing:
             (TEXT[TEXT.index("-1e-06") :], "", "line 15: no numbers follow the column names"),
             (TEXT[TEXT.index("-9.98e-07") :], "", "line 15: one sample is no waveform; wanted two samples or more"),
             (TEXT[TEXT.index("time_s") :], "", "no columns follow the header"),
-            (TEXT[TEXT.index("-9.96e-07") :], "-9.96e-07,0.00", "line 17: the file is cut off in its last line; found '-9.96e-07,0.00'"),
+            (TEXT[TEXT.index("-9.96e-07") :], "-9.96e-07,0.00", "line 17: the file is cut off: its last line has no end; found '-9.96e-07,0.00'"),
         ],
     )  # fmt: skip
     def test_what_is_wrong_is_named(self, tmp_path: Path, old: str, new: str, message: str) -> None:

@@ -110,6 +110,13 @@ class TestDamagedRows:
         lines = good_lines()
         refuse(tmp_path, "\n".join(lines[:-1]) + "\n" + last, "line 201", "cut off in its last line", last)
 
+    def test_a_last_number_that_is_cut_off(self, tmp_path: Path) -> None:
+        """All others have six decimals; a line end behind the last one would say that it is whole."""
+        lines = [*good_lines()[:-1], "9.9e-08,0.40"]
+        refuse(tmp_path, "\n".join(lines), "line 201", "cut off in its last line; found 0.40; wanted a number written")
+        (tmp_path / "whole.csv").write_text("\n".join(good_lines()), encoding="utf-8")
+        assert read_capture(tmp_path / "whole.csv").outputs[1].signal_V.size == N
+
     @pytest.mark.parametrize("cell", ["", "NaN", "nan", "-1.#IND"])
     def test_a_sample_missing_among_the_others(self, tmp_path: Path, cell: str) -> None:
         lines = good_lines()

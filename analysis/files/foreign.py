@@ -99,6 +99,7 @@ def parse_foreign(text: bytes, *, name: str, channels: ChannelRoles | None = Non
     layout = find_layout(text)
     _refuse_spectra(layout)
     table = _Table(layout=layout, values=read_numbers(layout.body))
+    _refuse_cut_number(table)
     time_places, counting = _time_places(table)
     found = _channels(table, time_places, counting)
     companions = _companions(table, found)
@@ -133,6 +134,30 @@ def _refuse_spectra(layout: Layout) -> None:
             )  # fmt: skip
 
 
+def _refuse_cut_number(table: _Table) -> None:
+    """A last line without its end may have lost digits: then its number is shorter where all others are alike."""
+    text, rows = table.layout.body.text, table.layout.sample_rows
+    if text.endswith(b"\n") or len(rows) < 3:
+        return
+    forms = {_form(row[-1]) for row in rows if row != rows[-1]}
+    last = _form(rows[-1][-1])
+    if len(forms) == 1 and any(have < want for have, want in zip(last, forms.pop(), strict=True)):
+        raise CaptureError(
+            "the file is cut off in its last line",
+            where=table.line(len(table.values) - 1),
+            found=rows[-1][-1],
+            wanted=f"a number written like {rows[0][-1]}",
+            mend="export or copy it again",
+        )
+
+
+def _form(number: str) -> tuple[int, int]:
+    """How many digits stand behind the decimal mark and in the exponent."""
+    mantissa, _, exponent = number.casefold().partition("e")
+    decimals = re.search(r"[.,](\d*)$", mantissa)
+    return len(decimals[1]) if decimals else 0, len(exponent.lstrip("+-"))
+
+
 def _time_places(table: _Table) -> tuple[list[int], list[int]]:
     """Places of the columns of times, and of those that only count the samples."""
     columns = table.layout.columns
@@ -149,8 +174,10 @@ def _time_places(table: _Table) -> tuple[list[int], list[int]]:
         times = _rising_place(table, bare)
     if not times and not step_is_stated:
         _refuse_other_axes(table, others)
-        if not counting:
-            raise _no_time(table)
+    only_volts = all(c.unit is not None and c.unit.dimension is Dimension.VOLTAGE for c in columns)
+    if not times and not counting and not (step_is_stated and (len(columns) == 1 or only_volts)):
+        # Beside a step that is stated, a column that is not said to be volts may be times that were damaged.
+        raise _no_time(table)
     for place in times:
         if _OTHER_NAMES.match(columns[place].name):
             raise _other_axis(table, place, columns[place].name)
@@ -223,8 +250,11 @@ def _no_time(table: _Table) -> CaptureError:
 
 
 def _counts(column: FloatArray) -> bool:
+    """Whether a column counts samples: whole numbers that rise by one, more where rows were lost."""
     part = column[np.isfinite(column)]
-    return part.size > 2 and bool(np.all(np.diff(part) == 1)) and float(part[0]) == round(float(part[0]))
+    steps = np.diff(part)
+    whole = bool(np.all(part == np.round(part)))
+    return part.size > 2 and whole and bool(np.all(steps >= 1)) and float(np.median(steps)) == 1
 
 
 def _is_even(column: FloatArray) -> bool:
@@ -285,15 +315,20 @@ def _named_after(one: str, other: str) -> bool:
 def _times(table: _Table, place: int | None, counting: Sequence[int]) -> _Times:
     if place is None or place in counting:
         return _counted_times(table, place)
-    column = table.values[:, place] * _time_scale(table, place)
+    scale = _time_scale(table, place)
+    column = table.values[:, place] * scale
     first, count = _finite_part(table, column, place)
     stamps = column[first : first + count]
+    increments = stated_steps(table.layout.settings, only_named=False)
+    quanta = _quanta(table, place, stamps / scale) * scale if increments else None
+    return _Times(place=place, axis=_axis(table, stamps, first, place, quanta, increments), first=first, count=count)
+
+
+def _axis(
+    table: _Table, stamps: FloatArray, first: int, place: int, quanta: FloatArray | None, increments: Sequence[float]
+) -> TimeAxis:
     try:
-        axis = time_axis(
-            stamps,
-            quantum_s=_quantum(table, place) * _time_scale(table, place),
-            increments_s=stated_steps(table.layout.settings, only_named=False),
-        )
+        return time_axis(stamps, quanta_s=quanta, increments_s=increments)
     except TimeAxisError as fault:
         stands = "still" in fault.what
         raise CaptureError(
@@ -307,7 +342,6 @@ def _times(table: _Table, place: int | None, counting: Sequence[int]) -> _Times:
                 else "export one acquisition to a file"
             ),
         ) from fault
-    return _Times(place=place, axis=axis, first=first, count=count)
 
 
 def _counted_times(table: _Table, place: int | None) -> _Times:
@@ -323,10 +357,17 @@ def _counted_times(table: _Table, place: int | None) -> _Times:
             wanted="times, or one sample interval",
             mend="export with time, or add a line such as: # sample interval = 2e-9 s",
         )  # fmt: skip
-    axis = TimeAxis(t0_s=layout.start_s or 0.0, dt_s=steps[0])
+    start_s = layout.start_s or 0.0
     if place is None:
-        return _Times(place=None, axis=axis, first=0, count=len(table.values))
+        return _Times(place=None, axis=TimeAxis(t0_s=start_s, dt_s=steps[0]), first=0, count=len(table.values))
     first, count = _finite_part(table, table.values[:, place], place)
+    numbers = table.values[first : first + count, place]
+    # Samples are counted from 0 or from 1; a larger first number says that rows were cut off above.
+    passed = numbers - (numbers[0] if numbers[0] in (0, 1) else 0)
+    if bool(np.all(np.diff(numbers) == 1)):
+        axis = TimeAxis(t0_s=start_s + steps[0] * float(passed[0]), dt_s=steps[0])
+    else:
+        axis = TimeAxis(stamps_s=start_s + steps[0] * passed)
     return _Times(place=place, axis=axis, first=first, count=count)
 
 
@@ -349,12 +390,20 @@ def _time_scale(table: _Table, place: int) -> float:
     return 1.0
 
 
-def _quantum(table: _Table, place: int) -> float:
-    """The coarsest last digit of the stamps, told from the first and the last rows."""
+def _quanta(table: _Table, place: int, stamps: FloatArray) -> FloatArray:
+    """What the last digit of each stamp is worth, in the column's unit; told from the first and the last rows.
+
+    Stamps are rounded to so many decimals, or to so many digits: the finest decimal and the most digits seen are
+    those, for zeros at the end may have been left out.
+    """
     writing = table.layout.body.writing
     cells = [row[place] for row in table.layout.sample_rows]
-    digits = [Decimal(c.replace(",", ".")).as_tuple().exponent for c in cells if writing.is_number(c)]
-    return max((10.0 ** int(d) for d in digits), default=0.0)
+    written = [Decimal(c.replace(",", ".")).as_tuple() for c in cells if writing.is_number(c)]
+    finest = min(int(w.exponent) for w in written)
+    most = max(len(str(int("".join(map(str, w.digits))))) for w in written)
+    with np.errstate(divide="ignore"):
+        leading = np.floor(np.log10(np.abs(stamps)) + 1e-9)
+    return np.maximum(10.0**finest, 10.0 ** (leading - most + 1))
 
 
 def _finite_part(table: _Table, column: FloatArray, place: int) -> tuple[int, int]:

@@ -82,6 +82,7 @@ def find_layout(text: bytes) -> Layout:
         raise _too_few(tail, text, columns)
     first_cells = [writing.cells(line) for line in _filled(head[first:], writing, _SAMPLE_ROWS)]
     columns = _with_shorter_channels(columns, first_cells, writing)
+    n_cells = max(n_cells, columns[-1] + 1)
     body = Body(
         text=text, start=_offset(head, first), first_line=first + 1, writing=writing, columns=columns, n_cells=n_cells
     )

@@ -80,8 +80,8 @@ def read_numbers(body: Body) -> FloatArray:
     CaptureError
         A row whose cells are no numbers, or too few, or too many; an infinite value. The message says the line.
     """
-    fast = _read_at_once(body)
-    return fast if fast is not None else _read_by_line(body)
+    fast = read_at_once(body)
+    return fast if fast is not None else read_by_line(body)
 
 
 def line_of_row(body: Body, row: int) -> int:
@@ -94,8 +94,8 @@ def line_of_row(body: Body, row: int) -> int:
     return body.first_line
 
 
-def _read_at_once(body: Body) -> FloatArray | None:
-    """All rows by pyarrow; `None` where it does not take them as they are."""
+def read_at_once(body: Body) -> FloatArray | None:
+    """All rows by pyarrow, as `read_by_line` gives them; `None` where pyarrow does not take them as they are."""
     writing = body.writing
     if writing.quoted:
         return None
@@ -125,7 +125,8 @@ def _read_at_once(body: Body) -> FloatArray | None:
     return values if values.size and bool(np.all(np.isfinite(values))) else None
 
 
-def _read_by_line(body: Body) -> FloatArray:
+def read_by_line(body: Body) -> FloatArray:
+    """All rows one by one; see `read_numbers`."""
     rows: list[list[float]] = []
     lines = body.text[body.start :].decode("utf-8").split("\n")
     last = len(lines) - 1

@@ -68,9 +68,11 @@ def parse_capture(text: bytes, *, name: str) -> Capture:
     Raises
     ------
     CaptureError
-        Another version, an unknown or repeated name, a value that a condition cannot have, a column that is unknown,
+        The end is missing; another version, an unknown or repeated name, a value that a condition cannot have, a column that is unknown,
         missing or repeated, numbers that are none, time that does not rise. The message says line, name or column.
     """
+    if not text.endswith(b"\n"):
+        raise _cut_off(text)
     head = _head(text)
     body = Body(
         text=text, start=head.start, first_line=head.first_line, writing=Writing(),
@@ -122,6 +124,18 @@ def print_capture(capture: Capture) -> str:
     cells = [_stamps(first), *([repr(value) for value in r.signal_V.tolist()] for r in records)]
     lines += [",".join(row) for row in zip(*cells, strict=True)]
     return "\n".join(lines) + "\n"
+
+
+def _cut_off(text: bytes) -> CaptureError:
+    """A capture file ends its last line; one that does not may have lost digits of its last number."""
+    number = text.count(b"\n") + 1
+    return CaptureError(
+        "the file is cut off: its last line has no end",
+        where=f"line {number}",
+        found=shown(text[text.rfind(b"\n") + 1 :].decode("utf-8", errors="replace")),
+        wanted="a line end behind the last number",
+        mend="copy it again; if it is whole, end the last line",
+    )
 
 
 def _head(text: bytes) -> _Head:

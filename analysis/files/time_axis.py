@@ -38,18 +38,20 @@ class TimeAxisError(CaptureError):
     row: int = 0
 
 
-def time_axis(stamps_s: FloatArray, *, quantum_s: float = 0.0, increments_s: Sequence[float] = ()) -> TimeAxis:
+def time_axis(
+    stamps_s: FloatArray, *, quanta_s: FloatArray | None = None, increments_s: Sequence[float] = ()
+) -> TimeAxis:
     """Judge the stamps of a record.
 
     Parameters
     ----------
     stamps_s : array, shape (n,), n >= 2, finite
         Times as they stand in the file.
-    quantum_s : float
-        The coarsest last digit of the stamps, 0 where it is not known.
+    quanta_s : array, shape (n,), optional
+        What the last digit of each stamp is worth.
     increments_s : sequence of float
-        Steps that the file may be stating somewhere. One is used only where the stamps were rounded, and only when
-        every stamp lies within its rounding of the grid it makes.
+        Steps that the file may be stating somewhere. One is used only where the stamps are uneven, and only where
+        rounding explains every one of them: each stamp lies within half its last digit of the grid.
 
     Raises
     ------
@@ -63,7 +65,7 @@ def time_axis(stamps_s: FloatArray, *, quantum_s: float = 0.0, increments_s: Seq
     if middle > 0 and bool(np.all(np.abs(steps - middle) <= EVEN_RATIO * middle)):
         t0_s, dt_s = float(stamps_s[0]), even_step(stamps_s)
         return TimeAxis(t0_s=t0_s, dt_s=dt_s)
-    grid = _stated_grid(stamps_s, quantum_s, increments_s)
+    grid = None if quanta_s is None else _stated_grid(stamps_s, quanta_s, increments_s)
     if grid is not None:
         return grid
     if bool(np.any(steps == 0)):
@@ -109,22 +111,25 @@ def _gives(step_s: float, stamps_s: FloatArray, tolerance_s: float) -> bool:
     return bool(np.all(np.abs(grid - stamps_s) <= tolerance_s))
 
 
-def _stated_grid(stamps_s: FloatArray, quantum_s: float, increments_s: Sequence[float]) -> TimeAxis | None:
-    if quantum_s <= 0:
+def _stated_grid(stamps_s: FloatArray, quanta_s: FloatArray, increments_s: Sequence[float]) -> TimeAxis | None:
+    """The grid of a stated step that rounds to the stamps; `None` where there is none, or more than one."""
+    grids = [grid for step in increments_s if (grid := _rounded_grid(stamps_s, quanta_s, step)) is not None]
+    if not grids or any(abs(grid.dt_s / grids[0].dt_s - 1) > _SAME_RATIO for grid in grids):
         return None
-    index = np.arange(stamps_s.size, dtype=np.float64)
-    fitting: list[tuple[float, float]] = []
-    for step in increments_s:
-        if step <= 0:
-            continue
-        offsets = stamps_s - index * step
-        spread = float(np.max(offsets) - np.min(offsets))
-        if spread <= 1.01 * quantum_s:
-            fitting.append((step, 0.5 * float(np.max(offsets) + np.min(offsets))))
-    if not fitting or any(abs(step / fitting[0][0] - 1) > _SAME_RATIO for step, _ in fitting):
+    return grids[0]
+
+
+def _rounded_grid(stamps_s: FloatArray, quanta_s: FloatArray, step_s: float) -> TimeAxis | None:
+    if not step_s > 0:
         return None
-    step, t0_s = fitting[0]
-    return TimeAxis(t0_s=t0_s, dt_s=step)
+    # Rounding moves a step by less than the last digit: a row that is lost or doubled is no rounding.
+    slack = np.maximum(quanta_s[1:], quanta_s[:-1]) * (1 - _SAME_RATIO)
+    if bool(np.any(np.abs(np.diff(stamps_s) - step_s) >= slack)):
+        return None
+    starts = stamps_s - step_s * np.arange(stamps_s.size, dtype=np.float64)
+    half = (0.5 + _SAME_RATIO) * quanta_s
+    earliest, latest = float(np.max(starts - half)), float(np.min(starts + half))
+    return TimeAxis(t0_s=0.5 * (earliest + latest), dt_s=step_s) if earliest <= latest else None
 
 
 def _fault(what: str, stamps_s: FloatArray, row: int) -> TimeAxisError:
