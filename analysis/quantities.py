@@ -102,6 +102,17 @@ def parse_quantity(value: str | float | int, key: str) -> float:
     return _with_unit(match.group(), rest, key, repr(value))
 
 
+def parse_list(text: str, key: str) -> tuple[float, ...]:
+    """Read several quantities separated by commas, such as `5 V, 12 V`; none for an empty text.
+
+    Raises
+    ------
+    InputError
+        As `parse_quantity`; a decimal comma shows as a number without its unit, so each but bare numbers wants its unit.
+    """
+    return tuple(parse_quantity(part, key) for part in text.split(",") if part.strip())
+
+
 def _with_unit(number: str, written: str, key: str, found: str) -> float:
     unit = unit_of(key)
     if written in unit.spellings:

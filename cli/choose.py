@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
@@ -15,11 +15,32 @@ from darkedge.cli.common import (
     Paths,
     PlotFolder,
     guarded,
-    print_table,
+    print_listing,
     save_plots,
     say,
     take_in_paths,
 )
+
+if TYPE_CHECKING:
+    from darkedge.analysis.decide.results import Wish
+
+
+def _wish(*, rails: str | None, loads: str | None, **texts: str | None) -> Wish:
+    from darkedge.analysis.decide.results import Wish
+    from darkedge.analysis.quantities import parse_list, parse_quantity
+
+    keys = {
+        "pulse_width": "pulse_width_s",
+        "distortion": "distortion_ratio",
+        "amplitude": "amplitude_ratio",
+        "dark_current": "dark_current_A",
+        "min_signal": "min_signal_V",
+        "max_bias": "max_bias_V",
+        "stray": "board_stray_F",
+        "emitter_current": "emitter_current_A",
+    }
+    numbers = {keys[name]: parse_quantity(text, keys[name]) for name, text in texts.items() if text is not None}
+    return Wish(rails_V=parse_list(rails or "", "rails_V"), loads_ohm=parse_list(loads or "", "loads_ohm"), **numbers)
 
 
 def _wish_option(flag: str, metavar: str, text: str) -> object:
@@ -81,11 +102,10 @@ def choose(
     """
     from darkedge.analysis.explain import choose_for_devices
     from darkedge.analysis.files.results_json import choices_json
-    from darkedge.analysis.files.wishes import read_wish
     from darkedge.analysis.pictures.device import choice_figures
     from darkedge.cli.listing import choice_listings
 
-    wish = read_wish(
+    wish = _wish(
         pulse_width=pulse_width,
         distortion=distortion,
         amplitude=amplitude,
@@ -104,8 +124,8 @@ def choose(
     if json:
         typer.echo(choices_json(found.choices))
     else:
-        for title, columns, rows in choice_listings(found.choices):
-            print_table(title, columns, rows)
+        for listing in choice_listings(found.choices):
+            print_listing(listing)
     if plots is not None:
         save_plots(plots, choice_figures(found.choices))
     return intake.exit_status or found.exit_status

@@ -17,6 +17,7 @@ if TYPE_CHECKING:  # heavy: a command that only prints its help must not load th
     from matplotlib.figure import Figure
 
     from darkedge.analysis.files.intake import Intake
+    from darkedge.cli.listing import Listing
 
 P = ParamSpec("P")
 
@@ -122,19 +123,23 @@ def take_in_paths(
     return intake
 
 
-def print_table(title: str, columns: Sequence[str], rows: Sequence[Sequence[str]]) -> None:
+def print_listing(listing: Listing) -> None:
     """Print a table for people on stdout; nothing is cut off when it goes to a file or another program."""
     from rich import box
     from rich.console import Console
     from rich.table import Table
+    from rich.text import Text
 
     console = Console(width=None if sys.stdout.isatty() else 400, highlight=False)
-    table = Table(title=title or None, title_justify="left", box=box.SIMPLE_HEAD, pad_edge=False)
-    for column in columns:
-        table.add_column(column, overflow="fold", justify="left")
-    for row in rows:
-        table.add_row(*(cell.replace("[", r"\[") for cell in row))
-    console.print(table)
+    title = Text(listing.title) if listing.title else None
+    table = Table(title=title, title_justify="left", title_style="bold", box=box.SIMPLE_HEAD, pad_edge=False)
+    for column in listing.columns:
+        table.add_column(column, overflow="fold")
+    for row in listing.rows:
+        table.add_row(*(Text(cell) for cell in row))
+    console.print(table, new_line_start=False)
+    for note in listing.notes:
+        console.print(Text(f"Note: {note}\n"))
 
 
 def save_plots(folder: Path, figures: dict[str, Figure]) -> None:

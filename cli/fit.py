@@ -13,7 +13,7 @@ from darkedge.cli.common import (
     Paths,
     PlotFolder,
     guarded,
-    print_table,
+    print_listing,
     save_plots,
     say,
     take_in_paths,
@@ -49,8 +49,8 @@ def fit(
     if json:
         typer.echo(fits_json(found.devices))
     else:
-        for title, columns, rows in fit_listings(found.devices):
-            print_table(title, columns, rows)
+        for listing in fit_listings(found.devices):
+            print_listing(listing)
     if plots is not None:
         save_plots(plots, fit_figures(found.devices))
     return intake.exit_status or found.exit_status

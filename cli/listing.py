@@ -4,7 +4,9 @@ from __future__ import annotations
 
 from collections import Counter
 from collections.abc import Sequence
+from dataclasses import dataclass
 
+from darkedge.analysis.captures import DeviceKind
 from darkedge.analysis.columns import ALL_QUANTITIES
 from darkedge.analysis.decide.results import Choice, LimitVerdict, OperatingPoint, Screening
 from darkedge.analysis.explain import ExplainedDevice
@@ -13,7 +15,17 @@ from darkedge.analysis.junction.results import PARAMETERS
 from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.quantities import format_quantity, unit_of
 
-Listing = tuple[str, list[str], list[list[str]]]
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Listing:
+    """A table for people: title, headings, cells, and what is to be said below it."""
+
+    title: str
+    columns: list[str]
+    rows: list[list[str]]
+    notes: tuple[str, ...] = ()
+
+
 _HEADINGS = {
     "low_V": "low", "high_V": "high", "amplitude_V": "amplitude", "rise_time_s": "rise", "fall_time_s": "fall",
     "t_plh_s": "tPLH", "t_phl_s": "tPHL", "width_in_s": "width in", "width_out_s": "width out",
@@ -27,6 +39,10 @@ _LISTED = (
     "amplitude_V", "rise_time_s", "fall_time_s", "t_plh_s", "t_phl_s", "width_out_s", "duty_cycle_distortion",
     "on_delay_s", "on_time_s", "storage_time_s", "off_time_s", "dark_current_A",
 )  # fmt: skip
+_CONDITION_WORDS = {
+    "bias_V": "", "load_ohm": "", "emitter_current_A": "emitter ", "pulse_width_s": "pulse ", "drive_period_s": "period ",
+    "temperature_degC": "", "element": "element ", "driven_element": "driven element ",
+}  # fmt: skip
 _PARAMETER_WORDS = {
     "c_j0_F": "junction capacitance at zero bias", "v_bi_V": "built-in voltage", "grading": "grading exponent",
     "c_stray_F": "stray capacitance", "full_depletion_V": "full depletion at", "transit_s": "transit time",
@@ -68,7 +84,7 @@ def measurement_listing(measurements: Sequence[Measurement]) -> Listing:
         row += [format_quantity(known.bias_V, "V"), format_quantity(known.load_ohm, "Ω")]
         row += [cell(m.quantities.get(q), q) for q in quantities]
         rows.append([*row, ", ".join(m.flags)])
-    return "", columns, rows
+    return Listing(title="", columns=columns, rows=rows)
 
 
 def flag_lines(measurements: Sequence[Measurement]) -> list[str]:
@@ -95,8 +111,12 @@ def _parameters(device: ExplainedDevice) -> Listing | None:
         for name in PARAMETERS
         if name in fit.parameters
     ]
-    rows += [["note", note, ""] for note in fit.notes]
-    return f"{device.title}: junction, model {fit.model}", ["parameter", "value", "95 % interval"], rows
+    return Listing(
+        title=f"{device.title}: junction, model {fit.model}",
+        columns=["parameter", "value", "95 % interval"],
+        rows=rows,
+        notes=fit.notes,
+    )
 
 
 def _capacitance(device: ExplainedDevice) -> Listing | None:
@@ -105,7 +125,7 @@ def _capacitance(device: ExplainedDevice) -> Listing | None:
     rows = [
         [format_quantity(p.bias_V, "V"), format_quantity(p.c_F, "F", u=p.u_c_F)] for p in device.junction.capacitance
     ]
-    return f"{device.title}: junction and stray capacitance", ["bias", "C"], rows
+    return Listing(title=f"{device.title}: junction and stray capacitance", columns=["bias", "C"], rows=rows)
 
 
 def _shortest(device: ExplainedDevice) -> Listing | None:
@@ -120,7 +140,8 @@ def _shortest(device: ExplainedDevice) -> Listing | None:
         ]
         for p in device.shortest
     ]
-    return f"{device.title}: shortest pulse", ["bias", "load", "shortest pulse", "highest rate"], rows
+    columns = ["bias", "load", "shortest pulse", "highest rate"]
+    return Listing(title=f"{device.title}: shortest pulse", columns=columns, rows=rows)
 
 
 def _dark(device: ExplainedDevice) -> Listing | None:
@@ -130,44 +151,59 @@ def _dark(device: ExplainedDevice) -> Listing | None:
     rows = [
         [format_quantity(p.bias_V, "V"), cell(p.current_A, "dark_current_A"), ", ".join(p.flags)] for p in fit.points
     ]
-    rows += [["note", note, ""] for note in fit.notes]
-    title = f"{device.title}: dark current" + (f", model {fit.model}" if fit.model else "")
-    return title, ["bias at the junction", "dark current", "flags"], rows
+    title = f"{device.title}: {dark_current_words(device)}" + (f", model {fit.model}" if fit.model else "")
+    return Listing(title=title, columns=["bias", "dark current", "flags"], rows=rows, notes=fit.notes)
+
+
+def dark_current_words(device: ExplainedDevice) -> str:
+    """What the dark current of this device is the current of."""
+    transistor = device.device_kind in (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
+    return "collector current in the dark" if transistor else "dark current"
 
 
 def choice_listings(choices: Sequence[Choice]) -> list[Listing]:
-    """For each device the best pair or the nearest miss, then all candidates."""
-    out: list[Listing] = []
-    for choice in choices:
-        name = ", ".join(
-            str(x) for x in (choice.device or "unnamed device", choice.element and f"element {choice.element}") if x
-        )
-        shown = choice.best or choice.nearest
-        verdict = (
-            "no bias and load meets every wish; the nearest miss is marked" if choice.best is None else "best marked"
-        )
-        rows = [
-            [
-                ">" if point is shown else "",
-                format_quantity(point.bias_V, "V"),
-                format_quantity(point.load_ohm, "Ω"),
-                cell(point.signal_V, "signal_V"),
-                cell(point.rise_time_s, "rise_time_s"),
-                cell(point.shortest_pulse_s, "shortest_pulse_s"),
-                cell(point.dark_current_A, "dark_current_A"),
-                "; ".join(point.misses),
-            ]
-            for point in _worth_showing(choice, shown)
+    """For each device the best pair or the nearest miss, and beside it what each other bias offers."""
+    return [_choice(choice) for choice in choices]
+
+
+def _choice(choice: Choice) -> Listing:
+    element = f", element {choice.element}" if choice.element not in (None, 1) else ""
+    shown = choice.best or choice.nearest
+    rows = [
+        [
+            ">" if point is shown else "",
+            format_quantity(point.bias_V, "V"),
+            format_quantity(point.load_ohm, "Ω"),
+            cell(point.signal_V, "signal_V"),
+            cell(point.rise_time_s, "rise_time_s"),
+            cell(point.shortest_pulse_s, "shortest_pulse_s"),
+            cell(point.dark_current_A, "dark_current_A"),
+            "; ".join(point.misses),
         ]
-        rows += [["", "note", note, "", "", "", "", ""] for note in choice.notes]
-        columns = ["", "bias", "load", "signal", "rise", "shortest pulse", "dark current", "misses"]
-        out.append((f"{name}: {verdict}", columns, rows))
-    return out
+        for point in best_at_each_bias(choice)
+    ]
+    verdict = "the best pair is marked" if choice.best else "no pair meets every wish; the nearest miss is marked"
+    return Listing(
+        title=f"{choice.device or 'unnamed device'}{element}: {verdict}",
+        columns=["", "bias", "load", "signal", "rise", "shortest pulse", "dark current", "misses"],
+        rows=rows,
+        notes=choice.notes,
+    )
 
 
-def _worth_showing(choice: Choice, shown: OperatingPoint | None) -> Sequence[OperatingPoint]:
-    feasible = [p for p in choice.candidates if not p.misses or p is shown]
-    return feasible or choice.candidates
+def best_at_each_bias(choice: Choice) -> list[OperatingPoint]:
+    """At each bias the feasible load with the most signal, else the load with the fewest misses and the shortest pulse."""
+    shown = choice.best or choice.nearest
+    at: dict[float, list[OperatingPoint]] = {}
+    for point in choice.candidates:
+        at.setdefault(point.bias_V, []).append(point)
+    return [shown if shown in points else min(points, key=_rank) for points in at.values() if shown is not None]
+
+
+def _rank(point: OperatingPoint) -> tuple[int, float]:
+    if point.misses:
+        return len(point.misses), point.shortest_pulse_s.value or 0.0
+    return 0, -(point.signal_V.value or 0.0) if point.signal_V else 0.0
 
 
 def screening_listings(screening: Screening) -> list[Listing]:
@@ -190,9 +226,10 @@ def screening_listings(screening: Screening) -> list[Listing]:
         for lot in screening.lots
     ]
     rule = f"rule {screening.rule.value}, confidence {100 * screening.confidence:g} %"
+    columns = ["lot", "device", "element", "limit", "measured", "verdict", "why"]
     return [
-        (f"Devices ({rule})", ["lot", "device", "element", "limit", "measured", "verdict", "why"], rows),
-        ("Lots", ["lot", "verdict", "passed", "failed", "undecided"], lots),
+        Listing(title=f"Devices ({rule})", columns=columns, rows=rows),
+        Listing(title="Lots", columns=["lot", "verdict", "passed", "failed", "undecided"], rows=lots),
     ]
 
 
@@ -202,7 +239,7 @@ def _limit_words(held: LimitVerdict) -> str:
     bounds = [f"≥ {format_quantity(limit.lower, unit)}"] if limit.lower is not None else []
     bounds += [f"≤ {format_quantity(limit.upper, unit)}"] if limit.upper is not None else []
     when = ", ".join(
-        f"{key} {value if isinstance(value, str) else format_quantity(value, unit_of(key).symbol)}"
+        f"{_CONDITION_WORDS.get(key, key)}{value if isinstance(value, str) else format_quantity(value, unit_of(key).symbol)}"
         for key, value in limit.when.items()
     )
     name = _HEADINGS.get(limit.quantity, limit.quantity)

@@ -15,7 +15,7 @@ from darkedge.cli.common import (
     Names,
     Paths,
     guarded,
-    print_table,
+    print_listing,
     say,
     take_in_paths,
 )
@@ -59,8 +59,7 @@ def measure(
     if json:
         typer.echo(table_json(intake.measurements))
     elif out is None:
-        columns, rows = measurement_listing(intake.measurements)
-        print_table("", columns, rows)
+        print_listing(measurement_listing(intake.measurements))
         for line in flag_lines(intake.measurements):
             say(line)
     return intake.exit_status

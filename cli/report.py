@@ -14,7 +14,7 @@ from darkedge.cli.common import (
     Names,
     Paths,
     guarded,
-    print_table,
+    print_listing,
     say,
     take_in_paths,
 )
@@ -59,7 +59,7 @@ def report(
     content = build_report(intake, paths=paths, limits=wanted)
     write_report(content, out)
     if content.screening is not None:
-        for title, columns, rows in screening_listings(content.screening):
-            print_table(title, columns, rows)
+        for listing in screening_listings(content.screening):
+            print_listing(listing)
     typer.echo(f"report: {out.resolve()}")
     return intake.exit_status

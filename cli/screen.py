@@ -15,7 +15,7 @@ from darkedge.cli.common import (
     Names,
     Paths,
     guarded,
-    print_table,
+    print_listing,
     take_in_paths,
 )
 
@@ -53,6 +53,6 @@ def screen(
     if json:
         typer.echo(screening_json(screening))
     else:
-        for title, columns, rows in screening_listings(screening):
-            print_table(title, columns, rows)
+        for listing in screening_listings(screening):
+            print_listing(listing)
     return intake.exit_status or (0 if screening.verdict is Verdict.PASS else 1)

@@ -14,7 +14,7 @@ from collections.abc import Sequence
 import numpy as np
 from scipy import constants, optimize, stats
 
-from darkedge.analysis.captures import FloatArray, Kind
+from darkedge.analysis.captures import FloatArray, Kind, OutputConnection
 from darkedge.analysis.dark.results import DarkFit, DarkPoint
 from darkedge.analysis.dark.traces import junction_bias
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
@@ -94,7 +94,7 @@ def _fit_one(device: str | None, element: int | None, rows: Sequence[Measurement
     distinct = len({round(p.bias_V, 2) for p in valued})
     if distinct < _FEWEST:
         note = (
-            f"Dark current has a value at {distinct} biases; a model wants at least {_FEWEST}. "
+            f"Biases with a value of the dark current: {distinct}; a model wants at least {_FEWEST}. "
             "Measure at more biases, or with a larger sense resistor where only a bound is known."
         )
         return DarkFit(device=device, element=element, points=points, notes=(note,))
@@ -107,7 +107,8 @@ def _point(row: Measurement, fixture: Fixture) -> DarkPoint | None:
         return None
     current = row.quantities["dark_current_A"]
     load = row.conditions.load_ohm
-    if load is not None and current.value is not None:
+    across_load = row.conditions.output_connection in (None, OutputConnection.LOAD_TO_GROUND)
+    if across_load and load is not None and current.value is not None:
         resistance = fixture.effective_load(load, row.conditions.input_ohm).value
         bias = junction_bias(bias, current.value, resistance or load)
     return DarkPoint(

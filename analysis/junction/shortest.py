@@ -88,6 +88,8 @@ def _sweeps(
             continue
         width = m.value("width_in_s") or known.pulse_width_s
         amplitude = m.quantities.get("amplitude_V")
+        if known.bias_V is None or known.load_ohm is None:
+            continue  # captures at unknown conditions are no sweep
         if not width or amplitude is None or not amplitude.value or "clipped" in m.flags:
             continue
         out = m.quantities.get("width_out_s")
