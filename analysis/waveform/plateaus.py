@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -63,7 +63,10 @@ class Refined:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class _Span:
-    """One plateau: samples start to stop, and the edge before it (`middle_s` is its 50 % point, `None` at the head)."""
+    """One plateau: samples start to stop, and the edge before it.
+
+    `middle_s` is that edge's 50 % point, the start of the record at its head; `late_s` its time from 50 % to 90 %.
+    """
 
     start: int
     stop: int
@@ -117,7 +120,7 @@ def refine_levels(
 
     The level of a state is what its plateaus settle to: the exponential tail of the edge before is fitted along with
     it, so that the whole plateau counts. It joins the part before the first edge where the two agree; where they do
-    not, the part at rest is the level. A state in which no plateau settles has the level of its peak.
+    not, the one that went farther is the level. A state in which no plateau settles has the level of its peak.
 
     Parameters
     ----------
@@ -149,7 +152,7 @@ def _spans(time_s: FloatArray, changes: Changes, crossings_s: FloatArray) -> lis
     starts = np.concatenate(([0], np.searchsorted(time_s, middle + START_RATIO * late)))
     stops = np.concatenate((np.searchsorted(time_s, onsets(crossings_s)), [time_s.size]))
     middles = np.concatenate(([time_s[0]], middle, [time_s[-1]]))
-    lates = np.concatenate(([0.0], late))
+    lates = np.concatenate((late[:1], late))  # before the first edge, what there is of a tail is taken to be alike
     highs = np.concatenate(([not changes.rising[0]], changes.rising))
     edges = np.concatenate((crossings_s[:, 2] - crossings_s[:, 0], [0.0]))
     count = highs.size
@@ -171,10 +174,13 @@ def _draft(
     settled = [s for s in after if _settles(time_s, s)]
     if settled:
         tail = _tail_fit(time_s, signal_V, settled, high=high, noise=noise)
-        return _join(tail, _head(signal_V, heads[0]), noise, levels.amplitude_V) if heads else tail
+        if not heads:
+            return tail
+        head = _tail_fit(time_s, signal_V, heads[:1], high=high, noise=noise)
+        return _join(tail, head, high=high, noise=noise, amplitude_V=levels.amplitude_V)
     whole = [s for s in after if s.before_edge]
     if heads and not whole:
-        return _head(signal_V, heads[0])
+        return _tail_fit(time_s, signal_V, heads[:1], high=high, noise=noise)
     return _peaks(time_s, signal_V, whole or after or spans, high=high, noise=noise, levels=levels)
 
 
@@ -322,30 +328,22 @@ def _binned(x: FloatArray, y: FloatArray) -> tuple[FloatArray, FloatArray, Float
     return mean_x, mean_y, count[keep]
 
 
-def _head(signal_V: FloatArray, span: _Span) -> _Draft:
-    """Level of the part before the first edge: its mean."""
-    part = signal_V[span.start : span.stop]
-    level = float(np.mean(part))
-    return _Draft(
-        level_V=level, factor=1 / part.size, neighbours=part.size, residuals_V=(part - level,), settled=True
-    )  # fmt: skip
+def _join(tail: _Draft, head: _Draft, *, high: bool, noise: Noise, amplitude_V: float) -> _Draft:
+    """Join the level after edges with that before the first one.
 
-
-def _join(tail: _Draft, head: _Draft, noise: Noise, amplitude_V: float) -> _Draft:
-    """Join the level after edges with that before the first one; where they differ, the part at rest counts."""
+    Where they differ by more than their noise, one of them has not settled: the one nearer to the other state, which
+    is left out.
+    """
     residuals = (*head.residuals_V, *tail.residuals_V)
-    sag = {"sag_V": tail.sag_V, "sag_factor": tail.sag_factor}
     inflation = noise.inflation(max(tail.neighbours, head.neighbours, 1))
     u = noise.sigma_V * float(np.sqrt((tail.factor + head.factor) * inflation))
     if abs(tail.level_V - head.level_V) > max(4 * u, 1e-3 * amplitude_V):
-        return _Draft(
-            level_V=head.level_V, factor=head.factor, neighbours=head.neighbours, residuals_V=residuals, settled=True,
-            **sag,
-        )  # fmt: skip
+        outer = max if high else min
+        return replace(outer(tail, head, key=lambda d: d.level_V), residuals_V=residuals)
     a, b = 1 / tail.factor, 1 / head.factor
-    return _Draft(
-        level_V=(a * tail.level_V + b * head.level_V) / (a + b), factor=1 / (a + b),
-        neighbours=max(tail.neighbours, head.neighbours), residuals_V=residuals, settled=True, **sag,
+    return replace(
+        tail, level_V=(a * tail.level_V + b * head.level_V) / (a + b), factor=1 / (a + b),
+        neighbours=max(tail.neighbours, head.neighbours), residuals_V=residuals,
     )  # fmt: skip
 
 
