@@ -6,14 +6,21 @@ from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from darkedge.analysis.captures import DeviceKind
 from darkedge.analysis.columns import ALL_QUANTITIES
-from darkedge.analysis.decide.results import Choice, LimitVerdict, OperatingPoint, Screening
+from darkedge.analysis.decide.results import Choice, OperatingPoint, Screening
 from darkedge.analysis.explain import ExplainedDevice
 from darkedge.analysis.flags import REGISTRY
 from darkedge.analysis.junction.results import PARAMETERS
-from darkedge.analysis.measurement import Estimate, Measurement
-from darkedge.analysis.quantities import format_quantity, unit_of
+from darkedge.analysis.measurement import Measurement
+from darkedge.analysis.pictures.words import (
+    PARAMETER_WORDS,
+    QUANTITY_WORDS,
+    cell,
+    dark_current_words,
+    interval,
+    limit_words,
+)
+from darkedge.analysis.quantities import format_quantity
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -26,49 +33,10 @@ class Listing:
     notes: tuple[str, ...] = ()
 
 
-_HEADINGS = {
-    "low_V": "low", "high_V": "high", "amplitude_V": "amplitude", "rise_time_s": "rise", "fall_time_s": "fall",
-    "t_plh_s": "tPLH", "t_phl_s": "tPHL", "width_in_s": "width in", "width_out_s": "width out",
-    "pulse_width_distortion_s": "PWD", "duty_in": "duty in", "duty_out": "duty out",
-    "duty_cycle_distortion": "DCD", "jitter_s": "jitter", "dark_current_A": "dark current",
-    "on_delay_s": "td", "on_time_s": "ton", "storage_time_s": "ts", "off_time_s": "toff",
-    "current_transfer_ratio": "CTR", "output_low_V": "out low", "photocurrent_A": "photocurrent",
-    "responsivity_A_per_W": "responsivity",
-}  # fmt: skip
 _LISTED = (
     "amplitude_V", "rise_time_s", "fall_time_s", "t_plh_s", "t_phl_s", "width_out_s", "duty_cycle_distortion",
     "on_delay_s", "on_time_s", "storage_time_s", "off_time_s", "dark_current_A",
 )  # fmt: skip
-_CONDITION_WORDS = {
-    "bias_V": "", "load_ohm": "", "emitter_current_A": "emitter ", "pulse_width_s": "pulse ", "drive_period_s": "period ",
-    "temperature_degC": "", "element": "element ", "driven_element": "driven element ",
-}  # fmt: skip
-_PARAMETER_WORDS = {
-    "c_j0_F": "junction capacitance at zero bias", "v_bi_V": "built-in voltage", "grading": "grading exponent",
-    "c_stray_F": "stray capacitance", "full_depletion_V": "full depletion at", "transit_s": "transit time",
-}  # fmt: skip
-
-
-def cell(estimate: Estimate | None, name: str) -> str:
-    """A value with its uncertainty, a bound as a bound, a dash for what could not be had."""
-    unit = unit_of(name).symbol
-    if estimate is None:
-        return "–"
-    if estimate.value is not None:
-        return format_quantity(estimate.value, unit, u=estimate.u)
-    if estimate.hi95 is not None and estimate.lo95 is None:
-        return f"< {format_quantity(estimate.hi95, unit)}"
-    if estimate.lo95 is not None and estimate.hi95 is None:
-        return f"> {format_quantity(estimate.lo95, unit)}"
-    return f"{format_quantity(estimate.lo95, unit)} … {format_quantity(estimate.hi95, unit)}"
-
-
-def interval(estimate: Estimate, name: str) -> str:
-    """The 95 % interval, a dash where there is none."""
-    if estimate.lo95 is None and estimate.hi95 is None:
-        return "–"
-    unit = unit_of(name).symbol
-    return f"{format_quantity(estimate.lo95, unit)} … {format_quantity(estimate.hi95, unit)}"
 
 
 def measurement_listing(measurements: Sequence[Measurement]) -> Listing:
@@ -76,7 +44,7 @@ def measurement_listing(measurements: Sequence[Measurement]) -> Listing:
     quantities = [q for q in _LISTED if q in ALL_QUANTITIES and any(q in m.quantities for m in measurements)]
     several = len({m.element for m in measurements} - {None}) > 1
     columns = ["capture", *(["element"] if several else []), "bias", "load"]
-    columns += [_HEADINGS[q] for q in quantities] + ["flags"]
+    columns += [QUANTITY_WORDS[q] for q in quantities] + ["flags"]
     rows = []
     for m in measurements:
         known = m.conditions
@@ -107,7 +75,7 @@ def _parameters(device: ExplainedDevice) -> Listing | None:
     if fit is None:
         return None
     rows = [
-        [_PARAMETER_WORDS[name], cell(fit.parameters[name], name), interval(fit.parameters[name], name)]
+        [PARAMETER_WORDS[name], cell(fit.parameters[name], name), interval(fit.parameters[name], name)]
         for name in PARAMETERS
         if name in fit.parameters
     ]
@@ -151,14 +119,8 @@ def _dark(device: ExplainedDevice) -> Listing | None:
     rows = [
         [format_quantity(p.bias_V, "V"), cell(p.current_A, "dark_current_A"), ", ".join(p.flags)] for p in fit.points
     ]
-    title = f"{device.title}: {dark_current_words(device)}" + (f", model {fit.model}" if fit.model else "")
+    title = f"{device.title}: {dark_current_words(device.device_kind)}" + (f", model {fit.model}" if fit.model else "")
     return Listing(title=title, columns=["bias", "dark current", "flags"], rows=rows, notes=fit.notes)
-
-
-def dark_current_words(device: ExplainedDevice) -> str:
-    """What the dark current of this device is the current of."""
-    transistor = device.device_kind in (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
-    return "collector current in the dark" if transistor else "dark current"
 
 
 def choice_listings(choices: Sequence[Choice]) -> list[Listing]:
@@ -213,7 +175,7 @@ def screening_listings(screening: Screening) -> list[Listing]:
             device.lot or "–",
             device.device or "–",
             str(device.element or "–"),
-            _limit_words(held),
+            limit_words(held.limit),
             cell(held.estimate, held.limit.quantity),
             held.verdict.value.upper(),
             held.reason,
@@ -231,16 +193,3 @@ def screening_listings(screening: Screening) -> list[Listing]:
         Listing(title=f"Devices ({rule})", columns=columns, rows=rows),
         Listing(title="Lots", columns=["lot", "verdict", "passed", "failed", "undecided"], rows=lots),
     ]
-
-
-def _limit_words(held: LimitVerdict) -> str:
-    limit = held.limit
-    unit = unit_of(limit.quantity).symbol
-    bounds = [f"≥ {format_quantity(limit.lower, unit)}"] if limit.lower is not None else []
-    bounds += [f"≤ {format_quantity(limit.upper, unit)}"] if limit.upper is not None else []
-    when = ", ".join(
-        f"{_CONDITION_WORDS.get(key, key)}{value if isinstance(value, str) else format_quantity(value, unit_of(key).symbol)}"
-        for key, value in limit.when.items()
-    )
-    name = _HEADINGS.get(limit.quantity, limit.quantity)
-    return f"{name} {' and '.join(bounds)}" + (f" at {when}" if when else "")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Annotated
 
@@ -48,7 +49,7 @@ def report(
     darkedge report sample_captures --out first-report.html
     """
     from darkedge.analysis.files.limits_file import find_limits, read_limits
-    from darkedge.analysis.files.reporting import build_report, write_report
+    from darkedge.analysis.pictures.build import build_report, write_report
     from darkedge.cli.listing import screening_listings
 
     limits_file = limits or find_limits(paths)
@@ -56,7 +57,8 @@ def report(
     if limits_file:
         say(f"limits: {limits_file}")
     intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels)
-    content = build_report(intake, paths=paths, limits=wanted)
+    made = datetime.now(UTC).strftime("%Y-%m-%d %H:%M UTC")
+    content = build_report(intake, paths=paths, made=made, limits=wanted, limits_source=str(limits_file or ""))
     write_report(content, out)
     if content.screening is not None:
         for listing in screening_listings(content.screening):

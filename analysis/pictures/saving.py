@@ -1,0 +1,49 @@
+"""Figures to files and into a page."""
+
+from __future__ import annotations
+
+import base64
+import io
+import re
+from pathlib import Path
+
+from matplotlib.figure import Figure
+
+from darkedge.analysis.errors import InputError
+from darkedge.analysis.files.atomic import write_atomic
+from darkedge.analysis.pictures.style import look
+
+DPI = 150
+
+
+def save_png(figure: Figure, folder: Path, name: str) -> Path:
+    """Save a figure as PNG under a safe name, making the folder where it is not there; returns the path.
+
+    Raises
+    ------
+    InputError
+        The folder cannot be made or written to.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise InputError("the folder cannot be made", where=str(folder), found=error.strerror or "") from error
+    path = folder / f"{safe_name(name)}.png"
+    stream = io.BytesIO()
+    with look():
+        figure.savefig(stream, format="png", dpi=DPI)
+    write_atomic(path, stream.getvalue())
+    return path
+
+
+def safe_name(name: str) -> str:
+    """A file name made of letters, digits, dash, dot and underscore."""
+    return re.sub(r"[^\w.-]+", "_", name).strip("_.") or "plot"
+
+
+def as_data_uri(figure: Figure) -> str:
+    """The figure as an SVG data URI, for an `img` of a page that needs no network."""
+    stream = io.BytesIO()
+    with look():
+        figure.savefig(stream, format="svg", metadata={"Date": None})
+    return "data:image/svg+xml;base64," + base64.b64encode(stream.getvalue()).decode("ascii")
