@@ -104,7 +104,7 @@ def _measure_element(
             capture=capture.name, element=element, conditions=conditions, flags=(*flags, "no_pulse"), levels=LEVELS,
             n_pulses=0,
         )  # fmt: skip
-    pairing = pair_edges(drive.transitions, channel.transitions, end_s=channel.end_s) if drive is not None else None
+    pairing = _pairing(drive, channel, fixture)
     job = _Job(
         record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive, pairing=pairing,
         period=_period(drive, channel, conditions),
@@ -306,6 +306,12 @@ class _Job:
             if any(edges.get(name) is not None and (edges[name] or 0.0) < BENCH_RATIO * own for name, own in pairs):
                 found.add("bench_limited")
         return found
+
+
+def _pairing(drive: Channel | None, output: Channel, fixture: Fixture) -> Pairing | None:
+    if drive is None:
+        return None
+    return pair_edges(drive.transitions, output.transitions, end_s=output.end_s, skew_s=fixture.channel_skew_s)
 
 
 def _period(drive: Channel | None, output: Channel, conditions: Conditions) -> Estimate | None:

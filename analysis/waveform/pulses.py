@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -14,6 +13,7 @@ from darkedge.analysis.waveform.edges import IntArray, Transitions
 from darkedge.analysis.waveform.intervals import DRIVE, Budget, Instants, Interval, durations, instants
 
 LEAST_PULSES_FOR_JITTER = 3
+"""Delays of one kind from which their scatter says anything."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -30,7 +30,7 @@ class Pairing:
     left_over: bool
 
 
-def pair_edges(drive: Transitions, output: Transitions, *, end_s: float) -> Pairing | None:
+def pair_edges(drive: Transitions, output: Transitions, *, end_s: float, skew_s: float = 0.0) -> Pairing | None:
     """Pair each drive edge with the output edge that answers it; `None` where nothing pairs.
 
     Both polarities are tried. Under each, a drive edge is answered by the first output edge of the fitting direction
@@ -44,7 +44,10 @@ def pair_edges(drive: Transitions, output: Transitions, *, end_s: float) -> Pair
         With the 50 % level in the middle column.
     end_s : float
         End of the record, beyond which an answer may lie.
+    skew_s : float
+        How much later the output channel reads than the drive channel.
     """
+    output = replace(output, time_s=output.time_s - skew_s)
     tries = [_paired(drive, output, inverting=inverting) for inverting in (False, True)]
     most = max(pairs.shape[0] for pairs in tries)
     if most == 0:
@@ -85,27 +88,22 @@ def _paired(drive: Transitions, output: Transitions, *, inverting: bool) -> IntA
 
 
 def _slack(drive: Transitions, output: Transitions) -> float:
-    """How far an answer may seem to come before its drive edge: half the drive edge, and what the sampling blurs."""
-    edge = float(np.median(drive.time_s[:, -1] - drive.time_s[:, 0]))
+    """How far an answer may seem to come before its drive edge.
+
+    Half the drive edge, a skew that nobody measured, and what the sampling blurs.
+    """
+    edge = 0.6 * float(np.median(drive.time_s[:, -1] - drive.time_s[:, 0]))
+    skew = 0.25 * float(np.median(output.time_s[:, -1] - output.time_s[:, 0]))
     blur = 4 * float(np.median(np.hypot(drive.u_time_s[:, 1].mean(), output.u_time_s[:, 1])))
     gaps = np.diff(drive.time_s[:, 1])
     longest = 0.4 * float(np.min(gaps)) if gaps.size else np.inf
-    return min(0.6 * edge + blur, longest)
+    return min(edge + skew + blur, longest)
 
 
 def _slower_delay(drive: Transitions, output: Transitions, pairs: IntArray) -> float:
     lags = output.time_s[pairs[:, 1], 1] - drive.time_s[pairs[:, 0], 1]
     rising = drive.rising[pairs[:, 0]]
     return max(float(np.median(lags[rising == way])) for way in (True, False) if bool(np.any(rising == way)))
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Pulses:
-    """Times of the pulses of one output, by column name, and flags that came up on the way."""
-
-    quantities: Mapping[str, Estimate]
-    flags: tuple[str, ...]
-    n_pulses: int
 
 
 def time_edges(transitions: Transitions, which: IntArray, *, budget: Budget) -> dict[str, Estimate]:
