@@ -34,11 +34,12 @@ class ExplainedDevice:
     shortest: tuple[ShortestPulse, ...] = ()
     widths: tuple[PulseWidthPoint, ...] = ()
     dark: DarkFit | None = None
+    of_several: bool = False
 
     @property
     def title(self) -> str:
-        """Name for a heading: lot, device and element, those that are known."""
-        parts = [self.lot, self.device or "unnamed device", self.element and f"element {self.element}"]
+        """Name for a heading: lot and device, those that are known, and the element where the device has several."""
+        parts = [self.lot, self.device or "unnamed device", f"element {self.element}" if self.of_several else ""]
         return ", ".join(str(part) for part in parts if part)
 
 
@@ -81,7 +82,8 @@ def explain_devices(
     """
     devices: list[ExplainedDevice] = []
     errors: list[DarkedgeError] = []
-    for (lot, device, element), rows in _by_device(measurements).items():
+    groups = _by_device(measurements)
+    for (lot, device, element), rows in groups.items():
         try:
             fixture = _one_fixture(rows, fixture_for)
         except FitError as error:
@@ -107,6 +109,7 @@ def explain_devices(
                 shortest=tuple(shortest),
                 widths=tuple(widths),
                 dark=dark[0] if dark else None,
+                of_several=sum(key[:2] == (lot, device) for key in groups) > 1,
             )
         )
     return Explained(devices=tuple(devices), errors=tuple(errors))

@@ -5,14 +5,14 @@ from __future__ import annotations
 from matplotlib.figure import Figure
 
 from darkedge.analysis.decide.results import Choice, OperatingPoint
-from darkedge.analysis.pictures.style import FAINT, INK, WARN, engineering, look, new_figure
+from darkedge.analysis.pictures.style import FAINT, INK, OUTPUT, WARN, engineering, look, new_figure
 from darkedge.analysis.quantities import format_quantity
 
 
 def plot_choice(choice: Choice) -> Figure:
     """Shortest pulse against signal for all candidates, the feasible ones filled, the best (or the nearest miss) named."""
     with look():
-        figure = new_figure(7.2, 4.2)
+        figure = new_figure(4.0)
         axis = figure.subplots()
         biases = sorted({p.bias_V for p in choice.candidates})
         for bias in biases:

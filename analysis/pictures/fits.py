@@ -16,7 +16,7 @@ from darkedge.analysis.quantities import format_quantity
 def plot_edges(fit: JunctionFit, title: str) -> Figure:
     """Edge times against bias at each load, with what the model says, and the residuals below."""
     with look():
-        figure = new_figure(7.2, 4.6)
+        figure = new_figure(4.2)
         axis, below = figure.subplots(2, 1, sharex=True, height_ratios=(3, 1.2))
         groups = list(dict.fromkeys((e.load_ohm, e.quantity) for e in fit.edges))
         loads = sorted({load for load, _ in groups})
@@ -42,7 +42,7 @@ def plot_edges(fit: JunctionFit, title: str) -> Figure:
 def plot_capacitance(fit: JunctionFit, title: str) -> Figure:
     """Junction and stray capacitance together at each bias measured, with the curve between them."""
     with look():
-        figure = new_figure(7.2, 3.2)
+        figure = new_figure(3.2)
         axis = figure.subplots()
         bias = np.array([p.bias_V for p in fit.capacitance])
         total = np.array([p.c_F for p in fit.capacitance])

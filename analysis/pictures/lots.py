@@ -16,7 +16,7 @@ _LOOKS = {Verdict.PASS: ("o", OUTPUT), Verdict.FAIL: ("X", WARN), Verdict.UNDECI
 def plot_limit(devices: Sequence[DeviceVerdict], place: int, title: str) -> Figure:
     """Draw the limit at `place` for all devices: the estimate with its 95 % bar, a bound as an arrow, the limit as a line."""
     with look():
-        figure = new_figure(7.2, 2.6 if len(devices) <= 40 else 3.2)
+        figure = new_figure(2.6 if len(devices) <= 40 else 3.2, width_in=8.0)
         axis = figure.subplots()
         drawn: set[Verdict] = set()
         for position, device in enumerate(devices):

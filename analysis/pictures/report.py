@@ -10,6 +10,7 @@ from jinja2 import Environment, StrictUndefined, select_autoescape
 from markupsafe import Markup
 from matplotlib.figure import Figure
 
+from darkedge.analysis.captures import Kind
 from darkedge.analysis.cautions import Caution
 from darkedge.analysis.decide.results import Choice, LimitVerdict, Screening
 from darkedge.analysis.explain import ExplainedDevice
@@ -34,9 +35,12 @@ from darkedge.analysis.quantities import format_quantity
 MOST_ROWS = 400
 """Rows of the measurement table on the page; the saved table holds all of them."""
 MOST_DEVICE_PICTURES = 12
-_TABLE_QUANTITIES = (
+_PULSE_COLUMNS = (
     "amplitude_V", "rise_time_s", "fall_time_s", "t_plh_s", "t_phl_s", "width_out_s", "duty_cycle_distortion",
-    "on_delay_s", "storage_time_s", "dark_current_A",
+)  # fmt: skip
+_SWITCH_COLUMNS = (
+    "output_low_V", "rise_time_s", "fall_time_s", "t_plh_s", "t_phl_s", "on_delay_s", "on_time_s", "storage_time_s",
+    "off_time_s",
 )  # fmt: skip
 
 
@@ -90,7 +94,7 @@ def render_report(content: ReportContent) -> str:
         devices_left_out=max(0, len(_shown(content.devices)) - MOST_DEVICE_PICTURES),
         choice_pictures=[_picture(plot_choice(c), f"Speed against signal of {c.device}") for c in content.choices],
         waveform_pictures=[(_picture(w.figure, w.words), w) for w in content.waveforms],
-        table=_table(content.measurements),
+        tables=_tables(content.measurements),
         rows_left_out=max(0, len(content.measurements) - MOST_ROWS),
         counts=_counts(content.measurements),
         flags=_flags(content.measurements),
@@ -161,27 +165,45 @@ def _device_section(device: ExplainedDevice) -> Mapping[str, object]:
     }
 
 
-def _table(measurements: Sequence[Measurement]) -> Mapping[str, object]:
+def _tables(measurements: Sequence[Measurement]) -> list[Mapping[str, object]]:
+    """Pulses in a load, transistor outputs and dark traces each in a table with the columns that matter to them."""
     shown = measurements[:MOST_ROWS]
-    quantities = [q for q in _TABLE_QUANTITIES if any(q in m.quantities for m in shown)]
+    still = [m for m in shown if m.conditions.kind is Kind.DARK]
+    pulses = [m for m in shown if m.conditions.kind not in (Kind.DARK, Kind.OFFSET)]
+    switches = [m for m in pulses if "on_delay_s" in m.quantities or "storage_time_s" in m.quantities]
+    others = [m for m in pulses if m not in switches]
+    groups = (
+        ("Pulses", others, _PULSE_COLUMNS),
+        ("Transistor outputs", switches, _SWITCH_COLUMNS),
+        ("Dark traces", still, ("dark_current_A",)),
+    )
+    return [_table(caption, rows, columns) for caption, rows, columns in groups if rows]
+
+
+def _table(caption: str, rows: Sequence[Measurement], columns: Sequence[str]) -> Mapping[str, object]:
+    quantities = [q for q in columns if any(q in m.quantities for m in rows)]
+    several = len({m.element for m in rows}) > 1
     return {
-        "columns": ["capture", "device", "element", CONDITION_WORDS["bias_V"], CONDITION_WORDS["load_ohm"]]
-        + [QUANTITY_WORDS[q] for q in quantities],
+        "caption": caption,
+        "columns": [
+            "capture", "device", *(["element"] if several else []), CONDITION_WORDS["bias_V"], CONDITION_WORDS["load_ohm"],
+            *(QUANTITY_WORDS[q] for q in quantities),
+        ],
         "rows": [
             {
                 "cells": [
                     m.capture,
                     m.conditions.device or "–",
-                    str(m.element or "–"),
+                    *([str(m.element or "–")] if several else []),
                     format_quantity(m.conditions.bias_V, "V"),
                     format_quantity(m.conditions.load_ohm, "Ω"),
                     *(cell(m.quantities.get(q), q) for q in quantities),
                 ],
                 "flags": m.flags,
             }
-            for m in shown
+            for m in rows
         ],
-    }
+    }  # fmt: skip
 
 
 def _counts(measurements: Sequence[Measurement]) -> Mapping[str, int]:

@@ -50,7 +50,7 @@ def look() -> Iterator[None]:
         yield
 
 
-def new_figure(width_in: float = 7.2, height_in: float = 3.6) -> Figure:
+def new_figure(height_in: float, *, width_in: float = 5.8) -> Figure:
     """A figure of its own, outside any global state."""
     return Figure(figsize=(width_in, height_in), layout="constrained")
 

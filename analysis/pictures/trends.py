@@ -17,7 +17,7 @@ from darkedge.analysis.quantities import format_quantity
 def plot_pulse_widths(points: Sequence[PulseWidthPoint], shortest: Sequence[ShortestPulse], title: str) -> Figure:
     """What comes out of pulses of different widths: amplitude and width kept, and the shortest pulse that comes through."""
     with look():
-        figure = new_figure(7.2, 3.4)
+        figure = new_figure(3.2)
         axis = figure.subplots()
         groups = list(dict.fromkeys((p.bias_V, p.load_ohm) for p in points))
         for place, key in enumerate(groups):
@@ -45,14 +45,14 @@ def plot_pulse_widths(points: Sequence[PulseWidthPoint], shortest: Sequence[Shor
         axis.set_xlabel("input pulse width")
         axis.set_ylabel("output over input, or over settled")
         axis.set_title(title)
-        axis.legend(loc="lower right")
+        axis.legend(loc="upper right")
         return figure
 
 
 def plot_dark_current(fit: DarkFit, title: str) -> Figure:
     """Dark current against bias with 95 % bars, bounds as arrows, and the model where there is one."""
     with look():
-        figure = new_figure(7.2, 3.6 if fit.model else 3.0)
+        figure = new_figure(3.4 if fit.model else 2.8)
         if fit.model:
             axis, below = figure.subplots(2, 1, sharex=True, height_ratios=(3, 1))
         else:

@@ -22,7 +22,7 @@ def plot_capture(capture: Capture, marks: Marks, *, element: int, measured: Meas
     The picture shows what was measured, not more: `measured` supplies the times written beside the edges.
     """
     with look():
-        figure = new_figure(7.2, 4.0 if capture.drive is not None else 3.2)
+        figure = new_figure(3.6 if capture.drive is not None else 2.9)
         if capture.drive is not None:
             upper, lower = figure.subplots(2, 1, sharex=True, height_ratios=(1, 2.2))
             _draw(upper, capture.drive, marks.drive, DRIVE, "drive")
@@ -84,7 +84,7 @@ def _write_times(axis: Axes, measured: Measurement) -> None:
         if estimate is not None and estimate.value is not None:
             words.append(f"{name} {format_quantity(estimate.value, 's', u=estimate.u)}")
     if words:
-        axis.set_xlabel("time from the trigger\n" + "    ".join(words))
+        axis.set_xlabel("time from the trigger\n" + "  ·  ".join(words), fontsize=8.5)
 
 
 def _title(capture: Capture, element: int) -> str:
