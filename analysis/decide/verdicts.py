@@ -15,6 +15,7 @@ from darkedge.analysis.errors import LimitError
 from darkedge.analysis.lot.verdict import lot_verdicts
 from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.quantities import format_quantity, unit_of
+from darkedge.analysis.uncertainty import coverage_factor
 
 _BOUND_CONFIDENCE = 0.95
 Where = tuple[str | None, str | None, int | None]
@@ -190,7 +191,11 @@ def _mean(rows: Sequence[Measurement], quantity: str) -> Estimate | None:
     if len(values) < len(present):
         return _joint_bound(present)
     numbers, us = np.array([v for v, _ in values]), np.array([u for _, u in values])
-    scatter = float(np.std(numbers, ddof=1)) / math.sqrt(len(numbers)) if len(numbers) > 1 else 0.0
+    scatter = 0.0
+    if len(numbers) > 1:
+        # Few repeats tell the scatter badly: widened so that the normal 95 % interval is as wide as Student's.
+        widening = coverage_factor(0.95, len(numbers) - 1) / coverage_factor(0.95, math.inf)
+        scatter = widening * float(np.std(numbers, ddof=1)) / math.sqrt(len(numbers))
     return Estimate(value=float(numbers.mean()), u=max(float(us.mean()), scatter))
 
 

@@ -13,7 +13,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from iminuit import Minuit
-from numpy.typing import NDArray
 from scipy.optimize import least_squares
 
 from darkedge.analysis.captures import DeviceKind, FloatArray
@@ -24,6 +23,7 @@ from darkedge.analysis.junction.edge_data import EdgeData, edge_data
 from darkedge.analysis.junction.edges import off_edge_time, on_edge_time, two_pole_edge_time
 from darkedge.analysis.junction.results import CapacitancePoint, EdgePoint, JunctionFit
 from darkedge.analysis.measurement import Estimate, Measurement
+from darkedge.analysis.uncertainty import propagate, sensitivities
 
 _ALLOWED = {
     "c_j0_F": (1e-14, 1e-6), "v_bi_V": (0.15, 3.0), "grading": (0.05, 1.2), "c_stray_F": (1e-14, 1e-8),
@@ -339,7 +339,8 @@ class _Report:
         return {n: math.exp(self.best[self.layout.place(n)]) for n in names if n in self.layout.names}
 
     def _covariance(self) -> FloatArray:
-        jacobian = _jacobian(self.problem.residuals, self.best)
+        # The parameters are logarithms, so one step fits all.
+        jacobian = sensitivities(self.problem.residuals, self.best, steps=np.full(self.best.size, 1e-5))
         information = jacobian.T @ jacobian / self.scale
         # A direction that the data do not see has a variance as large as its whole physical range, not an infinite one.
         low, high = self.problem.bounds()
@@ -404,8 +405,8 @@ class _Report:
             stray = math.exp(theta[self.layout.place("c_stray_F")])
             return self.problem.capacitance(theta, biases) + stray
 
-        values, slopes = total(self.best), _jacobian(total, self.best)
-        variances = np.einsum("ij,jk,ik->i", slopes, covariance, slopes)
+        values, spread = propagate(total, self.best, covariance)
+        variances = np.diag(spread)
         return tuple(
             CapacitancePoint(bias_V=float(b), c_F=float(c), u_c_F=float(math.sqrt(max(v, 0.0))))
             for b, c, v in zip(biases, values, variances, strict=True)
@@ -443,15 +444,3 @@ def _same_current(one: float | None, other: float | None) -> bool:
     if one is None or other is None:
         return one is None and other is None
     return abs(one / other - 1) < 0.05
-
-
-def _jacobian(function: Callable[[FloatArray], FloatArray], at: FloatArray) -> NDArray[np.float64]:
-    """Central differences, shape (outputs, parameters); the parameters are logarithms, so one step fits all."""
-    step = 1e-5
-    columns = []
-    for place in range(at.size):
-        up, down = at.copy(), at.copy()
-        up[place] += step
-        down[place] -= step
-        columns.append((function(up) - function(down)) / (2 * step))
-    return np.column_stack(columns)
