@@ -48,6 +48,12 @@ FARTHEST_MOVE = 0.6
 LEAST_VARIANCE_RATIO = 0.05
 """Variance of a crossing over that under white noise of the same size, below which no correlation is believed."""
 
+PERHAPS_MISFIT, SURELY_MISFIT = 2.0, 5.0
+"""Standard deviations of chi-squared beyond which a shape is doubted, and beyond which it is no longer an answer."""
+
+AGREEMENT, AGREEMENT_IN_DOUBT = 2.0, 3.0
+"""Standard deviations within which windows agree: where the shape surely misfits, and where it may after all be right."""
+
 CHECK_BINS = 10
 """Parts into which residuals are lumped to see whether a shape fits."""
 
@@ -231,17 +237,23 @@ def _located(pieces: _Pieces, straight: Transitions, *, levels: StateLevels, noi
     corrected = np.zeros(pieces.which.size, dtype=np.bool_)
     for rising in (True, False):
         group = np.flatnonzero(pieces.rising == rising)
-        if group.size and not _fits(pieces, shapes, group, sigma=sigma, u_level=u_level, noise=noise):
-            x[group], gain[group], doubt[group] = _corrected(pieces, shapes, group, wanted, x, sigma=sigma, noise=noise)
+        misfit = _misfit(pieces, shapes, group, sigma=sigma, u_level=u_level, noise=noise) if group.size else 0.0
+        if misfit > PERHAPS_MISFIT:
+            reaches = (*REACHES, np.inf) if misfit < SURELY_MISFIT else REACHES
+            x[group], gain[group], doubt[group] = _corrected(
+                pieces, shapes, group, wanted, x, reaches=reaches, sigma=sigma, noise=noise
+            )
             corrected[group] = True
     fine = _Fine(x=x, gain=gain, doubt=doubt, corrected=corrected, good=shapes.good)
     return _put_back(pieces, straight, fine, levels=levels, noise=noise)
 
 
-def _fits(pieces: _Pieces, shapes: EdgeShapes, group: IntArray, *, sigma: float, u_level: float, noise: Noise) -> bool:
-    """Whether the residuals of some edges, lumped into a few parts of the edge, are no more than noise.
+def _misfit(
+    pieces: _Pieces, shapes: EdgeShapes, group: IntArray, *, sigma: float, u_level: float, noise: Noise
+) -> float:
+    """How far the residuals of some edges, lumped into a few parts of the edge, are beyond noise.
 
-    Chi-squared of the lumped means about zero, against its expectation and two of its standard deviations.
+    Chi-squared of the lumped means about zero, less its expectation, in its standard deviations.
     """
     x, residual = pieces.x[group], shapes.residual[group]
     samples = pieces.weight[group] * pieces.group[group][:, None]
@@ -256,7 +268,7 @@ def _fits(pieces: _Pieces, shapes: EdgeShapes, group: IntArray, *, sigma: float,
     variance = sigma**2 * noise.inflation(per_edge) / count + u_level**2
     chi2 = float(np.sum((sums / count) ** 2 / np.maximum(variance, 1e-30)))
     dof = max(count.size - 3, 1)
-    return bool(chi2 < dof + 2 * np.sqrt(2 * dof))
+    return (chi2 - dof) / float(np.sqrt(2 * dof))
 
 
 def _corrected(
@@ -266,13 +278,14 @@ def _corrected(
     wanted: FloatArray,
     x: FloatArray,
     *,
+    reaches: tuple[float, ...],
     sigma: float,
     noise: Noise,
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Crossings of shape plus local polynomial of its residuals for some edges: x, gain and doubt of `_Fine`."""
     part = shapes.select(group)
     entries, weight, wanted, x = pieces.x[group], pieces.weight[group], wanted[group], x[group]
-    reach, doubt = _choose_reach(entries, weight, part.residual, x, sigma, noise, pieces.group[group])
+    reach, doubt = _choose_reach(entries, weight, part.residual, x, reaches, sigma, noise, pieces.group[group])
 
     def sum_at(place: FloatArray) -> tuple[FloatArray, FloatArray]:
         local = _smoother(entries, weight, place, reach)
@@ -292,20 +305,23 @@ def _choose_reach(
     weight: FloatArray,
     residual: FloatArray,
     x: FloatArray,
+    reaches: tuple[float, ...],
     sigma: float,
     noise: Noise,
     group: IntArray,
 ) -> tuple[FloatArray, FloatArray]:
-    """Widest window for each level whose correction agrees with those of all narrower ones, to twice their noise.
+    """Widest window for each level whose correction agrees with those of all narrower ones, within their noise.
 
     Corrections are meaned over the edges, which share a shape. After Lepski (1991) and Goldenshluger and Nemirovski
-    (1997). Returns half widths, shape (k,), where 0 is the straight line between neighbours; and, in progress, by how
-    much more than noise the chosen correction differs from the next narrower one's, which is bias that may be left.
+    (1997). Returns half widths, shape (k,), where 0 is the straight line between neighbours and infinity no correction
+    at all; and, in progress, by how much more than noise the chosen correction differs from the next narrower one's,
+    which is bias that may be left.
     """
+    agreement = AGREEMENT_IN_DOUBT if np.inf in reaches else AGREEMENT
     chosen, doubt = np.zeros(x.shape[1]), np.zeros(x.shape[1])
     kept: list[tuple[FloatArray, FloatArray]] = []
     open_ = np.ones(x.shape[1], dtype=np.bool_)
-    for reach in (0.0, *REACHES):
+    for reach in (0.0, *reaches):
         inside = np.sum((np.abs(entries[:, None, :] - x[:, :, None]) <= reach) * weight[:, None, :], axis=2)
         usable = open_ & (np.median(inside, axis=0) >= LEAST_IN_WINDOW) if reach else open_.copy()
         if not bool(np.any(usable)):
@@ -314,7 +330,7 @@ def _choose_reach(
         offset = np.mean(np.einsum("ekm,em->ek", local, residual), axis=0)
         spread = np.sqrt(np.mean(_variance(local, noise, group), axis=0) / x.shape[0]) * sigma
         for earlier, its_spread in kept:
-            agrees = np.abs(offset - earlier) <= 2 * its_spread
+            agrees = np.abs(offset - earlier) <= agreement * its_spread
             open_ &= agrees | ~usable
             usable &= agrees
         if kept:
@@ -328,9 +344,12 @@ def _choose_reach(
 def _smoother(entries: FloatArray, weight: FloatArray, x: FloatArray, reach: FloatArray) -> FloatArray:
     """Weights of the entries in a local quadratic about each x, evaluated there; shape (n, k, m).
 
-    A window that holds too few entries gives the straight line between the two entries that straddle x.
+    A window that holds too few entries gives the straight line between the two entries that straddle x; a window
+    without end gives nothing, so that the shape stands.
     """
     distance = entries[:, None, :] - x[:, :, None]
+    corrects = np.isfinite(reach)
+    reach = np.where(corrects, reach, 1.0)
     inside = (np.abs(distance) <= reach[None, :, None]) * weight[:, None, :]
     scaled = distance / np.maximum(reach, 1e-9)[None, :, None] * inside
     design = np.stack((inside, scaled, scaled * scaled), axis=2)
@@ -338,10 +357,10 @@ def _smoother(entries: FloatArray, weight: FloatArray, x: FloatArray, reach: Flo
     normal = design @ design.transpose(0, 1, 3, 2)
     normal = np.where(enough[:, :, None, None], normal, np.eye(3))
     first = np.linalg.solve(normal + 1e-9 * np.eye(3), np.array([1.0, 0.0, 0.0])[:, None])[..., 0]
-    quadratic = np.asarray(np.einsum("ekp,ekpm->ekm", first, design))
-    if bool(np.all(enough)):
-        return quadratic
-    return np.where(enough[:, :, None], quadratic, _straddle(distance, weight))
+    weights = np.asarray(np.einsum("ekp,ekpm->ekm", first, design))
+    if not bool(np.all(enough)):
+        weights = np.where(enough[:, :, None], weights, _straddle(distance, weight))
+    return weights * corrects[None, :, None]
 
 
 def _straddle(distance: FloatArray, weight: FloatArray) -> FloatArray:

@@ -145,8 +145,11 @@ def onsets(crossings_s: FloatArray) -> FloatArray:
     """Instants at which edges surely have not begun yet, shape (n,), from their 10, 50 and 90 % crossings (n, 3).
 
     A one-pole edge leaves with a corner close before its 10 % point; a Gaussian one has a long foot. The skewness of
-    the edge tells which: 0.25 to 1.7 times the time from 10 % to 50 % before the 10 % point.
+    the edge tells which: 0.25 (one pole), 1.7 (Gaussian) or 3 times (one pole run backwards) the time from 10 % to
+    50 % before the 10 % point.
     """
     first, second = np.diff(crossings_s, axis=1).T
     skew = np.divide(second, first, out=np.ones_like(first), where=first > 0)
-    return np.asarray(crossings_s[:, 0] - first * np.interp(skew, (1.0, ONE_POLE_SKEW), (1.7, 0.25)))
+    return np.asarray(
+        crossings_s[:, 0] - first * np.interp(skew, (1 / ONE_POLE_SKEW, 1.0, ONE_POLE_SKEW), (3.0, 1.7, 0.25))
+    )
