@@ -119,7 +119,8 @@ def _refined(
 ) -> Refined | None:
     """Refine levels and noise until they stay; `None` where the amplitude does not stand out.
 
-    Twice at least: only with the noise and its correlation known can it be told how much of a plateau belongs to the level.
+    Once more at least where the noise turns out otherwise than its differences said: how much of a plateau belongs to
+    its level can only be told against the noise.
     """
     noise = Noise(sigma_V=noise_V, correlation=np.ones(1), n_flat=0)
     for again in (True, True, False):
@@ -127,14 +128,20 @@ def _refined(
         refined = refine_levels(
             time_s, signal_V, levels=levels, changes=changes, crossings_s=crossings, noise=noise, step_V=step_V
         )
-        new, first, noise = refined.levels, noise.n_flat == 0, refined.noise
+        new, unlike, noise = refined.levels, _unlike(refined.noise, noise), refined.noise
         if new.amplitude_V <= max(LEAST_SIGNAL_TO_NOISE * noise.sigma_V, LEAST_CODES * step_V):
             return None
         moved = max(abs(new.low_V - levels.low_V), abs(new.high_V - levels.high_V))
         levels = new
-        if not again or not (first or moved > LEVEL_SHIFT_RATIO * new.amplitude_V):
+        if not again or not (unlike or moved > LEVEL_SHIFT_RATIO * new.amplitude_V):
             break
     return refined
+
+
+def _unlike(found: Noise, assumed: Noise) -> bool:
+    return (
+        found.correlation.size != assumed.correlation.size or abs(found.sigma_V - assumed.sigma_V) > 0.2 * found.sigma_V
+    )
 
 
 def _is_drift(refined: Refined, changes: Changes) -> bool:
