@@ -18,7 +18,8 @@ from darkedge.analysis.junction.shortest import shortest_pulses
 from darkedge.analysis.measurement import Measurement
 
 FixtureFor = Callable[[str], Fixture]
-_TRANSISTOR_OUTPUTS = (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
+TRANSISTOR_OUTPUTS = (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
+"""Kinds whose edges are those of a transistor."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -93,7 +94,7 @@ def explain_devices(
         dark = fit_dark_current(rows, fixture=fixture)
         kind = next((r.conditions.device_kind for r in rows if r.conditions.device_kind is not None), None)
         junction = None
-        if kind not in _TRANSISTOR_OUTPUTS and _has_pulses(rows):
+        if kind not in TRANSISTOR_OUTPUTS and _has_pulses(rows):
             try:
                 junction = fit_junction(rows, fixture=fixture)
             except FitError as error:

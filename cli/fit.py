@@ -38,7 +38,7 @@ def fit(
     darkedge fit sample_captures/photodiode --plots plots
     """
     intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels)
-    from darkedge.analysis.explain import explain_devices
+    from darkedge.analysis.explain import TRANSISTOR_OUTPUTS, explain_devices
     from darkedge.analysis.files.results_json import fits_json
     from darkedge.analysis.pictures.device import fit_figures
     from darkedge.cli.listing import fit_listings
@@ -46,6 +46,11 @@ def fit(
     found = explain_devices(intake.measurements, fixture_for=intake.fixture_for)
     for error in found.errors:
         say(f"not fitted: {error}")
+    for device in found.devices:
+        if device.device_kind in TRANSISTOR_OUTPUTS:
+            say(
+                f"{device.title}: a transistor output does not show the junction's capacitance; no junction was fitted."
+            )
     if json:
         typer.echo(fits_json(found.devices))
     else:
