@@ -5,7 +5,6 @@ from __future__ import annotations
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
-from decimal import Decimal
 from itertools import pairwise
 
 import numpy as np
@@ -397,13 +396,19 @@ def _quanta(table: _Table, place: int, stamps: FloatArray) -> FloatArray:
     those, for zeros at the end may have been left out.
     """
     writing = table.layout.body.writing
-    cells = [row[place] for row in table.layout.sample_rows]
-    written = [Decimal(c.replace(",", ".")).as_tuple() for c in cells if writing.is_number(c)]
-    finest = min(int(w.exponent) for w in written)
-    most = max(len(str(int("".join(map(str, w.digits))))) for w in written)
+    cells = [row[place] for row in table.layout.sample_rows if writing.is_number(row[place])]
+    finest = min(map(_last_digit, cells))
+    most = max(len(re.sub(r"[eE].*|\D", "", cell).lstrip("0")) for cell in cells)
     with np.errstate(divide="ignore"):
         leading = np.floor(np.log10(np.abs(stamps)) + 1e-9)
     return np.maximum(10.0**finest, 10.0 ** (leading - most + 1))
+
+
+def _last_digit(number: str) -> int:
+    """The power of ten of a number's last digit."""
+    decimals, _ = _form(number)
+    exponent = re.search(r"[eE]([+-]?\d{1,3})$", number)
+    return (int(exponent[1]) if exponent else 0) - decimals
 
 
 def _finite_part(table: _Table, column: FloatArray, place: int) -> tuple[int, int]:

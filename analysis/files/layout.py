@@ -44,7 +44,7 @@ class Layout:
     """What was understood of a file.
 
     `settings` are the cells of every line above the numbers and of everything beside them, blank ones left out, with
-    their line numbers (from 1). `start_s` and `increment_s` are those that stand in the row of units. `first_rows`
+    their line numbers (from 1). `start_s` and `increment_s` are those that stand in the row of units. `sample_rows`
     are the cells of the columns in the first and last rows.
     """
 
@@ -87,7 +87,7 @@ def find_layout(text: bytes) -> Layout:
         text=text, start=_offset(head, first), first_line=first + 1, writing=writing, columns=columns, n_cells=n_cells
     )
     headings = _Headings.above(head[:first], writing, columns)
-    samples = [*first_cells, *(writing.cells(line) for line in tail)]
+    samples = [*first_cells, *(writing.cells(line) for line in tail if _is_row(line, writing, columns))]
     layout = Layout(
         body=body,
         columns=headings.columns,

@@ -20,8 +20,9 @@ from darkedge.analysis.errors import CaptureError
 BLANKS = " "
 """Separator of columns that are aligned with runs of blanks."""
 
-_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?")
-_NUMBER_WITH_COMMA = re.compile(r"[+-]?(?:\d+(?:,\d+)?|,\d+)(?:[eE][+-]?\d+)?")
+_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:[eE][+-]?\d+)?", re.ASCII)
+_NUMBER_WITH_COMMA = re.compile(r"[+-]?(?:\d+(?:,\d+)?|,\d+)(?:[eE][+-]?\d+)?", re.ASCII)
+_BARE_COMMA = re.compile(rb",(?!\d)")
 _NO_NUMBER = re.compile(r"[+-]?(?:nan|1\.#(?:qnan|ind))", re.IGNORECASE)
 _INFINITE = re.compile(r"[+-]?(?:inf|infinity|1\.#inf)", re.IGNORECASE)
 _QUOTE = '"'
@@ -97,7 +98,8 @@ def line_of_row(body: Body, row: int) -> int:
 def read_at_once(body: Body) -> FloatArray | None:
     """All rows by pyarrow, as `read_by_line` gives them; `None` where pyarrow does not take them as they are."""
     writing = body.writing
-    if writing.quoted:
+    # pyarrow reads `0,` as 0 where the comma is the decimal mark; here it is a number that lost its digits.
+    if writing.quoted or (writing.decimal == "," and _BARE_COMMA.search(body.text, body.start)):
         return None
     data = memoryview(body.text)[body.start :]
     separator = writing.separator

@@ -78,9 +78,9 @@ def parse_capture(text: bytes, *, name: str) -> Capture:
         text=text, start=head.start, first_line=head.first_line, writing=Writing(),
         columns=tuple(range(len(head.columns))), n_cells=len(head.columns),
     )  # fmt: skip
-    if not text[head.start :].strip():
-        raise CaptureError("no numbers follow the column names", where=f"line {head.first_line}", wanted="samples")
     values = read_numbers(body)
+    if not values.size:
+        raise CaptureError("no numbers follow the column names", where=f"line {head.first_line}", wanted="samples")
     if bool(np.any(np.isnan(values))):
         row, column = np.argwhere(np.isnan(values))[0]
         raise CaptureError(

@@ -47,7 +47,7 @@ def read_text(path: Path) -> bytes:
     text = _utf8(data, where)
     if b"\r" in text:
         text = text.replace(b"\r\n", b"\n").replace(b"\r", b"\n")
-    if not text.strip():
+    if not text or text.isspace():
         raise CaptureError("the file is empty", where=where, wanted="a capture", mend="export it again")
     return text
 
@@ -79,6 +79,8 @@ def _utf8(data: bytes, where: str) -> bytes:
             return _from_utf16(data, "utf-16-be", where)
     if _has_controls(head):
         raise _not_text(where, "bytes that are no text")
+    if data.isascii():
+        return data
     try:
         data.decode("utf-8")
     except UnicodeDecodeError:
