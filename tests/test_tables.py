@@ -51,7 +51,7 @@ measurements = st.builds(
         kind=st.none() | st.sampled_from(Kind),
         reference=st.none() | st.sampled_from(Reference),
         device=st.none() | words,
-        bias_V=st.none() | numbers,
+        bias_V=st.none() | positive,
         driven_element=st.none() | st.integers(1, 9),
     ),
     quantities=st.dictionaries(st.sampled_from(ALL_QUANTITIES), estimates, max_size=4),
@@ -106,6 +106,7 @@ def test_a_capture_is_not_a_table(tmp_path: Path) -> None:
         (",pulse,", ",pulses,", "kind: unknown word; found 'pulses'"),
         ("run,capture", "run,capture,colour", "cannot be read|unknown column; found 'colour'"),
         ("run/captures/0001_pulse.csv", "", "a row without a capture"),
+        (",1000.0,", ",-1000.0,", "row 1, load_ohm: not a possible condition; found '-1000.0'"),
     ],
 )
 def test_a_wrong_cell_is_named(tmp_path: Path, old: str, new: str, words: str) -> None:

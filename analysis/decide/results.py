@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from enum import StrEnum
 
+from darkedge.analysis.errors import InputError
 from darkedge.analysis.measurement import Estimate
 
 
@@ -98,7 +99,13 @@ class Screening:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Wish:
-    """What is wanted of a bias and load. `None` means no such wish."""
+    """What is wanted of a bias and load. `None` means no such wish.
+
+    Raises
+    ------
+    InputError
+        A wish that is not positive, or a ratio outside 0 to 1.
+    """
 
     pulse_width_s: float
     distortion_ratio: float = 0.1
@@ -110,6 +117,23 @@ class Wish:
     board_stray_F: float | None = None
     emitter_current_A: float | None = None
     min_signal_V: float | None = None
+
+    def __post_init__(self) -> None:
+        for name in ("pulse_width_s", "dark_current_A", "max_bias_V", "emitter_current_A", "min_signal_V"):
+            self._check(name, getattr(self, name), lambda x: x > 0, "a value above zero")
+        self._check("board_stray_F", self.board_stray_F, lambda x: x >= 0, "zero or more")
+        for name in ("distortion_ratio", "amplitude_ratio"):
+            self._check(name, getattr(self, name), lambda x: 0 < x < 1, "a ratio between 0 and 1, such as 10 %")
+        for name, values in (("rails_V", self.rails_V), ("loads_ohm", self.loads_ohm)):
+            for value in values:
+                self._check(name, value, lambda x: x > 0, "values above zero")
+        object.__setattr__(self, "rails_V", tuple(dict.fromkeys(self.rails_V)))
+        object.__setattr__(self, "loads_ohm", tuple(dict.fromkeys(self.loads_ohm)))
+
+    @staticmethod
+    def _check(name: str, value: float | None, allowed: Callable[[float], bool], wanted: str) -> None:
+        if value is not None and not allowed(value):
+            raise InputError(f"{name} cannot be wished", found=f"{value:g}", wanted=wanted)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -204,7 +204,12 @@ def _condition(name: str, value: object, where: str) -> object:
             raise InputError("unknown word", where=f"{where}, {name}", found=repr(value), wanted=wanted) from None
     if name in TEXT:
         return str(value)
-    return _whole(name, value, where) if name in WHOLE else _number(name, value, where)
+    number = _whole(name, value, where) if name in WHOLE else _number(name, value, where)
+    if number is not None and (number < 0 or (number == 0 and name == "load_ohm")) and name != "temperature_degC":
+        raise InputError(
+            "not a possible condition", where=f"{where}, {name}", found=repr(value), wanted="a value above zero"
+        )
+    return number
 
 
 def _quantities(cells: Mapping[str, object], where: str) -> dict[str, Estimate]:

@@ -90,7 +90,7 @@ def edge_data(measurements: Sequence[Measurement], fixture: Fixture) -> EdgeData
         raise FitError(
             "no edge can be used for a fit",
             where=where,
-            found=_why_none(len(rows), spoiled, len(usable)),
+            found=_why_none(len(rows), len(driven), spoiled, len(usable)),
             wanted="pulse captures that settle, with bias and load stated",
             mend="state the conditions with --names or --conditions, and see the flags of the captures",
         )
@@ -107,9 +107,11 @@ def _name(measurements: Sequence[Measurement]) -> str:
     return f"{first.conditions.device or 'unnamed device'}{element}"
 
 
-def _why_none(rows: int, spoiled: Counter[str], usable: int) -> str:
+def _why_none(rows: int, driven: int, spoiled: Counter[str], usable: int) -> str:
     if not rows:
         return "no pulse capture"
+    if not driven:
+        return f"{rows} captures in which another element was driven"
     if not usable:
         return "flags " + ", ".join(f"{flag} ({count})" for flag, count in spoiled.items())
     return f"{usable} captures without bias or load"
