@@ -24,7 +24,7 @@ P = ParamSpec("P")
 Paths = Annotated[
     list[Path],
     typer.Argument(
-        metavar="PATH...", help="Captures, folders, runs, lots, or a saved measurement table.", show_default=False
+        metavar="PATH", help="Captures, folders, runs, lots, or a saved measurement table.", show_default=False
     ),
 ]
 Names = Annotated[
@@ -131,13 +131,14 @@ def print_listing(listing: Listing) -> None:
     from rich.text import Text
 
     console = Console(width=None if sys.stdout.isatty() else 400, highlight=False)
-    title = Text(listing.title) if listing.title else None
-    table = Table(title=title, title_justify="left", title_style="bold", box=box.SIMPLE_HEAD, pad_edge=False)
+    if listing.title:
+        console.print(Text(listing.title, style="bold"))
+    table = Table(box=box.SIMPLE_HEAD, pad_edge=False)
     for column in listing.columns:
         table.add_column(column, overflow="fold")
     for row in listing.rows:
         table.add_row(*(Text(cell) for cell in row))
-    console.print(table, new_line_start=False)
+    console.print(table)
     for note in listing.notes:
         console.print(Text(f"Note: {note}\n"))
 

@@ -21,11 +21,11 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
 )
-app.command("measure")(measure.measure)
-app.command("fit")(fit.fit)
-app.command("choose")(choose.choose)
-app.command("screen")(screen.screen)
-app.command("report")(report.report)
+app.command("measure", short_help="Captures into the measurement table.")(measure.measure)
+app.command("fit", short_help="Junction capacitance, shortest pulse, dark current.")(fit.fit)
+app.command("choose", short_help="Bias and load for a wanted pulse.")(choose.choose)
+app.command("screen", short_help="Verdicts for devices and lots.")(screen.screen)
+app.command("report", short_help="One self-contained HTML page.")(report.report)
 
 
 def _version(wanted: bool) -> None:
