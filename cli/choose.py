@@ -19,6 +19,7 @@ from darkedge.cli.common import (
     save_plots,
     say,
     take_in_paths,
+    working,
 )
 
 if TYPE_CHECKING:
@@ -118,7 +119,8 @@ def choose(
         emitter_current=emitter_current,
     )
     intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels)
-    found = choose_for_devices(intake.measurements, wish=wish, fixture_for=intake.fixture_for)
+    with working("fitting and choosing"):
+        found = choose_for_devices(intake.measurements, wish=wish, fixture_for=intake.fixture_for)
     for error in found.errors:
         say(f"no choice: {error}")
     if json:

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import functools
 import sys
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, ParamSpec
@@ -121,6 +122,15 @@ def take_in_paths(
     for refusal in intake.refusals:
         say(f"refused: {refusal.error}")
     return intake
+
+
+@contextmanager
+def working(what: str) -> Iterator[None]:
+    """Say on stderr that something takes its time, while it does."""
+    from rich.console import Console
+
+    with Console(stderr=True).status(what):
+        yield
 
 
 def print_listing(listing: Listing) -> None:

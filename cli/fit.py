@@ -17,6 +17,7 @@ from darkedge.cli.common import (
     save_plots,
     say,
     take_in_paths,
+    working,
 )
 
 
@@ -43,7 +44,8 @@ def fit(
     from darkedge.analysis.pictures.device import fit_figures
     from darkedge.cli.listing import fit_listings
 
-    found = explain_devices(intake.measurements, fixture_for=intake.fixture_for)
+    with working("fitting"):
+        found = explain_devices(intake.measurements, fixture_for=intake.fixture_for)
     for error in found.errors:
         say(f"not fitted: {error}")
     for device in found.devices:

@@ -18,6 +18,7 @@ from darkedge.cli.common import (
     print_listing,
     say,
     take_in_paths,
+    working,
 )
 
 
@@ -58,8 +59,9 @@ def report(
         say(f"limits: {limits_file}")
     intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels)
     made = datetime.now(UTC).strftime("%Y-%m-%d %H:%M UTC")
-    content = build_report(intake, paths=paths, made=made, limits=wanted, limits_source=str(limits_file or ""))
-    write_report(content, out)
+    with working("fitting and drawing"):
+        content = build_report(intake, paths=paths, made=made, limits=wanted, limits_source=str(limits_file or ""))
+        write_report(content, out)
     if content.screening is not None:
         for listing in screening_listings(content.screening):
             print_listing(listing)
