@@ -17,12 +17,17 @@ from darkedge.analysis.files.intake import Intake
 from darkedge.analysis.fixture import Fixture
 from darkedge.analysis.measurement import Measurement
 from darkedge.analysis.pictures.report import ReportContent, WaveformPicture, render_report
-from darkedge.analysis.pictures.waveforms import plot_capture
+from darkedge.analysis.pictures.waveforms import plot_capture, plot_dark_trace
 from darkedge.analysis.quantities import format_quantity
 from darkedge.analysis.waveform.marks import mark_capture
 
 MOST_WAVEFORMS = 12
-_WORTH_SEEING = ("no_pulse", "clipped", "ringing", "slow_tail", "droop", "never_settles")
+_WORTH_SEEING = frozenset(
+    {"no_pulse", "clipped", "ringing", "slow_tail", "droop", "never_settles", "light_leak", "drifting"}
+)
+
+
+_DRAWN = (Kind.PULSE, Kind.DARK, None)
 
 
 def build_report(
@@ -92,20 +97,18 @@ def _waveforms(intake: Intake, screening: Screening | None) -> tuple[list[Wavefo
     """Captures worth a picture: those behind a verdict that is no pass, those with flags one can see, then one of each device."""
     if intake.reread is None:
         return [], 0
-    pulses = [m for m in intake.measurements if m.conditions.kind in (Kind.PULSE, None) and "refused" not in m.flags]
-    pulses = [m for m in pulses if m.capture in intake.sources]
-    order: dict[tuple[str, int | None], Measurement] = {}
+    drawn = [m for m in intake.measurements if m.conditions.kind in _DRAWN and m.capture in intake.sources]
+    drawn = [m for m in drawn if "refused" not in m.flags]
     failing = set() if screening is None else _failing_captures(screening)
+    order: dict[tuple[str, int | None], Measurement] = {}
     for some in (
-        [m for m in pulses if m.capture in failing],
-        _one_of_each([m for m in pulses if m.quantities]),
-        [m for m in pulses if set(m.flags) & set(_WORTH_SEEING)],
+        [m for m in drawn if m.capture in failing],
+        _one_of_each([m for m in drawn if m.quantities and m.conditions.kind is not Kind.DARK]),
+        [m for m in drawn if _WORTH_SEEING & set(m.flags)],
     ):
         order |= {(m.capture, m.element): m for m in some if (m.capture, m.element) not in order}
-    wanted = list(order.values())
-    return [p for m in wanted[:MOST_WAVEFORMS] if (p := _waveform(intake, m)) is not None], max(
-        0, len(pulses) - min(len(wanted), MOST_WAVEFORMS)
-    )
+    pictures = [p for m in list(order.values())[:MOST_WAVEFORMS] if (p := _waveform(intake, m)) is not None]
+    return pictures, len(drawn) - len(pictures)
 
 
 def _failing_captures(screening: Screening) -> set[str]:
@@ -133,11 +136,14 @@ def _waveform(intake: Intake, m: Measurement) -> WaveformPicture | None:
     except DarkedgeError:
         return None  # changed since it was measured; the table still shows what was measured
     element = m.element or 1
-    marks = mark_capture(capture, element=element, fixture=intake.fixture_for(m.capture))
-    words = f"Waveform of {m.capture}, element {element}, with its levels and its 10, 50 and 90 % points"
-    return WaveformPicture(
-        capture=m.capture, figure=plot_capture(capture, marks, element=element, measured=m), words=words, flags=m.flags
-    )
+    if m.conditions.kind is Kind.DARK:
+        figure = plot_dark_trace(capture, element=element, measured=m)
+        words = f"Dark trace {m.capture}, element {element}, with its mean"
+    else:
+        marks = mark_capture(capture, element=element, fixture=intake.fixture_for(m.capture))
+        figure = plot_capture(capture, marks, element=element, measured=m)
+        words = f"Waveform of {m.capture}, element {element}, with its levels and its 10, 50 and 90 % points"
+    return WaveformPicture(capture=m.capture, figure=figure, words=words, flags=m.flags)
 
 
 def _cautions(intake: Intake) -> tuple[Caution, ...]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from importlib.resources import files
@@ -12,7 +13,7 @@ from matplotlib.figure import Figure
 
 from darkedge.analysis.captures import Kind
 from darkedge.analysis.cautions import Caution
-from darkedge.analysis.decide.results import Choice, LimitVerdict, Screening
+from darkedge.analysis.decide.results import Choice, DeviceVerdict, LimitVerdict, Screening, Verdict
 from darkedge.analysis.explain import ExplainedDevice
 from darkedge.analysis.flags import REGISTRY, Flag
 from darkedge.analysis.junction.results import PARAMETERS
@@ -83,24 +84,93 @@ class _Picture:
 
 def render_report(content: ReportContent) -> str:
     """Return the page as HTML: no network, no script, everything inside; names from outside are escaped."""
-    environment = Environment(autoescape=select_autoescape(default=True), undefined=StrictUndefined, trim_blocks=True)
+    environment = Environment(
+        autoescape=select_autoescape(default=True), undefined=StrictUndefined, trim_blocks=True, finalize=_printable
+    )
     template = environment.from_string(files(__package__ or "").joinpath("report.html").read_text(encoding="utf-8"))
+    screening = content.screening
     return template.render(
         content=content,
         css=Markup(files(__package__ or "").joinpath("report.css").read_text(encoding="utf-8")),
-        verdict=None if content.screening is None else content.screening.verdict.value,
+        sentences={code: f"{flag.sentence} {flag.mend}" for code, flag in REGISTRY.items()},
+        limits=[] if screening is None or not screening.devices else [v.limit for v in screening.devices[0].limits],
+        held_devices=[] if screening is None else sorted(screening.devices, key=lambda d: _GRAVITY[d.verdict]),
+        not_passed=[] if screening is None else _not_passed(screening),
         limit_pictures=_limit_pictures(content),
         device_sections=[_device_section(d) for d in _worth_a_section(content.devices)],
         devices_left_out=max(0, len(_shown(content.devices)) - MOST_DEVICE_PICTURES),
-        choice_pictures=[_picture(plot_choice(c), f"Speed against signal of {c.device}") for c in content.choices],
+        choice_pictures=[
+            _picture(plot_choice(c), f"Speed against signal of {c.device or 'unnamed device'}") for c in content.choices
+        ],
         waveform_pictures=[(_picture(w.figure, w.words), w) for w in content.waveforms],
         tables=_tables(content.measurements),
         rows_left_out=max(0, len(content.measurements) - MOST_ROWS),
         counts=_counts(content.measurements),
+        summary=_summary(content.measurements),
+        methods=_methods(content.measurements),
         flags=_flags(content.measurements),
         limit_words=limit_words,
         held_cell=_held_cell,
+        name_of=_name_of,
     )
+
+
+_GRAVITY = {Verdict.FAIL: 0, Verdict.UNDECIDED: 1, Verdict.PASS: 2}
+
+
+def _printable(value: object) -> object:
+    """Text as a page can hold it: control characters, halves of surrogate pairs and the like are shown as unreadable."""
+    if not isinstance(value, str) or isinstance(value, Markup):
+        return value
+    return "".join(c if c.isprintable() else " " if c in "\n\t" else "\N{REPLACEMENT CHARACTER}" for c in value)
+
+
+def _not_passed(screening: Screening) -> list[tuple[DeviceVerdict, LimitVerdict]]:
+    """Every limit that a device does not pass, failures first."""
+    found = [(d, v) for d in screening.devices for v in d.limits if v.verdict is not Verdict.PASS]
+    return sorted(found, key=lambda pair: _GRAVITY[pair[1].verdict])
+
+
+def _name_of(device: DeviceVerdict) -> str:
+    element = f", element {device.element}" if device.element not in (None, 1) else ""
+    return f"{device.device or 'unnamed device'}{element}"
+
+
+def _summary(measurements: Sequence[Measurement]) -> list[tuple[str, ...]]:
+    """For each device what was measured of it: captures, and the span of bias and load."""
+    groups: dict[tuple[str | None, str | None], list[Measurement]] = {}
+    for m in measurements:
+        if "refused" not in m.flags:
+            groups.setdefault((m.conditions.lot, m.conditions.device), []).append(m)
+    return [
+        (
+            ", ".join(x for x in (lot, device or "unnamed device") if x),
+            _kind_words(rows),
+            _span([m.conditions.bias_V for m in rows], "V"),
+            _span([m.conditions.load_ohm for m in rows], "Ω"),
+            str(len({flag for m in rows for flag in m.flags}) or "none"),
+        )
+        for (lot, device), rows in groups.items()
+    ]
+
+
+def _kind_words(rows: Sequence[Measurement]) -> str:
+    counts = Counter((m.conditions.kind or Kind.PULSE).value for m in {m.capture: m for m in rows}.values())
+    return ", ".join(f"{count} {kind}" for kind, count in counts.items())
+
+
+def _span(values: Sequence[float | None], unit: str) -> str:
+    known = sorted({v for v in values if v is not None})
+    if not known:
+        return "–"
+    ends = [format_quantity(v, unit) for v in (known[0], known[-1])]
+    return ends[0] if len(known) == 1 else f"{ends[0]} … {ends[1]}"
+
+
+def _methods(measurements: Sequence[Measurement]) -> list[tuple[str, str, int]]:
+    """Which levels and which estimator made the rows, and how many."""
+    counts = Counter((m.levels, m.estimator) for m in measurements if m.quantities)
+    return [(levels or "–", estimator or "–", count) for (levels, estimator), count in counts.most_common()]
 
 
 def _picture(figure: Figure, alt: str) -> _Picture:
@@ -109,7 +179,7 @@ def _picture(figure: Figure, alt: str) -> _Picture:
 
 def _limit_pictures(content: ReportContent) -> list[_Picture]:
     screening = content.screening
-    if screening is None:
+    if screening is None or not screening.devices:
         return []
     found = []
     for place, held in enumerate(screening.devices[0].limits):
@@ -157,7 +227,7 @@ def _device_section(device: ExplainedDevice) -> Mapping[str, object]:
         ],
         "dark_words": dark_current_words(device.device_kind),
         "dark": [
-            (format_quantity(p.bias_V, "V"), cell(p.current_A, "dark_current_A"), ", ".join(p.flags))
+            (format_quantity(p.bias_V, "V"), cell(p.current_A, "dark_current_A"), p.flags)
             for p in (device.dark.points if device.dark else ())
         ],
         "notes": notes,
@@ -181,29 +251,23 @@ def _tables(measurements: Sequence[Measurement]) -> list[Mapping[str, object]]:
 
 
 def _table(caption: str, rows: Sequence[Measurement], columns: Sequence[str]) -> Mapping[str, object]:
+    """One table, its rows gathered under the device and the folder that they share."""
     quantities = [q for q in columns if any(q in m.quantities for m in rows)]
     several = len({m.element for m in rows}) > 1
-    return {
-        "caption": caption,
-        "columns": [
-            "capture", "device", *(["element"] if several else []), CONDITION_WORDS["bias_V"], CONDITION_WORDS["load_ohm"],
-            *(QUANTITY_WORDS[q] for q in quantities),
-        ],
-        "rows": [
-            {
-                "cells": [
-                    m.capture,
-                    m.conditions.device or "–",
-                    *([str(m.element or "–")] if several else []),
-                    format_quantity(m.conditions.bias_V, "V"),
-                    format_quantity(m.conditions.load_ohm, "Ω"),
-                    *(cell(m.quantities.get(q), q) for q in quantities),
-                ],
-                "flags": m.flags,
-            }
-            for m in rows
-        ],
-    }  # fmt: skip
+    groups: dict[str, list[Mapping[str, object]]] = {}
+    for m in rows:
+        folder, _, name = m.capture.rpartition("/")
+        lot = f"lot {m.conditions.lot}" if m.conditions.lot else ""
+        heading = " · ".join(x for x in (m.conditions.device or "unnamed device", lot, folder) if x)
+        cells = [
+            *([str(m.element or "–")] if several else []),
+            format_quantity(m.conditions.bias_V, "V"),
+            format_quantity(m.conditions.load_ohm, "Ω"),
+            *(cell(m.quantities.get(q), q) for q in quantities),
+        ]
+        groups.setdefault(heading, []).append({"name": name, "cells": cells, "flags": m.flags})
+    heads = ["capture", *(["element"] if several else []), CONDITION_WORDS["bias_V"], CONDITION_WORDS["load_ohm"]]
+    return {"caption": caption, "columns": heads + [QUANTITY_WORDS[q] for q in quantities], "groups": groups}
 
 
 def _counts(measurements: Sequence[Measurement]) -> Mapping[str, int]:
