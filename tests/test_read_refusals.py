@@ -264,6 +264,23 @@ class TestNoWaveform:
         )
         refuse(tmp_path, text, "line 2, column 1 (Reverse Voltage)", "the column that rises is no time; found V")
 
+    @pytest.mark.parametrize("heading", ["V,I", "I,V", "I,U", "Reverse voltage,I", "Vr,Ir", "V,Dark"])
+    def test_current_against_voltage_is_never_taken_for_time_because_it_rises(
+        self, tmp_path: Path, heading: str
+    ) -> None:
+        rows = "".join(f"{i / 1e6:.6f},{1e-9 * (i + 1) ** 0.5:.4e}\n" for i in range(80))
+        message = refuse(tmp_path, f"{heading}\n{rows}", "line 1")
+        assert "no time" in message or "which column is the time" in message
+
+    @pytest.mark.parametrize("heading", ["Pulse width (us),amplitude (V)", "rise_time_s,out_V", "delay (ns),U (V)"])
+    def test_a_sweep_over_a_duration(self, tmp_path: Path, heading: str) -> None:
+        refuse(
+            tmp_path,
+            heading + "\n" + "\n".join(good_rows()) + "\n",
+            "line 1, column 1",
+            "the column that rises is no time",
+        )
+
     def test_a_table_of_results(self, tmp_path: Path) -> None:
         text = "cycle,rise (ns),amplitude (V)\n" + "".join(f"{i},{v * 30:.3f},{v:.4f}\n" for i, v in enumerate(VOLT))
         refuse(tmp_path, text, "line")

@@ -21,10 +21,13 @@ from darkedge.analysis.files.units_written import Dimension, WrittenUnit
 LONGEST_BARE_STEP_S = 1e-4
 """Times without a unit are taken as seconds only below this step; above it they may be in any unit."""
 
-_TIME_NAMES = re.compile(r"(?:time|t|tiempo|zeit|temps|tempo|tid|x|x-axis)\b", re.IGNORECASE)
+_TIME_NAMES = re.compile(r"(?:time|t|tiempo|zeit|temps|tempo|tid|x|x-axis)[ _]?\d*\b", re.IGNORECASE)
 _OTHER_NAMES = re.compile(
-    r"freq|hertz|volt|bias|curr|capac|wavel|temp(?:erat|\b)|dist|posit|angle|cycle|phase", re.IGNORECASE
+    r"\b(?:freq|hertz|volt|bias|curr|capac|wavel|temp(?:erat|\b)|dist|posit|angle|cycle|phase|power|leak|dark|load)"
+    r"|\b(?:pulse|rise|fall|width|delay|period|jitter|storage)|^[iucfqprgv]$|^[iv]_?[rfdbac]{1,2}$",
+    re.IGNORECASE,
 )
+"""Names of axes that are no time of a record: other quantities, and durations that are results."""
 _WAVEFORM = "a waveform: volts against time in seconds"
 
 
@@ -163,6 +166,7 @@ def _time_places(table: _Table) -> tuple[list[int], list[int]]:
     stated = [p for p, c in enumerate(columns) if c.unit is not None and c.unit.dimension is Dimension.TIME]
     counting = [p for p in range(len(columns)) if p not in stated and _counts(table.values[:, p])]
     if stated:
+        _refuse_other_names(table, stated)
         return stated, counting
     step_is_stated = table.layout.increment_s is not None or stated_steps(table.layout.settings, only_named=True)
     others = [p for p in range(len(columns)) if p not in counting]
@@ -177,10 +181,19 @@ def _time_places(table: _Table) -> tuple[list[int], list[int]]:
     if not times and not counting and not (step_is_stated and (len(columns) == 1 or only_volts)):
         # Beside a step that is stated, a column that is not said to be volts may be times that were damaged.
         raise _no_time(table)
+    _refuse_other_names(table, times)
     for place in times:
-        if _OTHER_NAMES.match(columns[place].name):
-            raise _other_axis(table, place, columns[place].name)
+        # Without a unit, only a place before the channels or a name makes a column that rises a time.
+        if columns[place].name and place != others[0] and not _TIME_NAMES.match(columns[place].name):
+            raise _other_axis(table, place, columns[place].name) if len(times) == 1 else _several(table, times)
     return times, counting
+
+
+def _refuse_other_names(table: _Table, places: Sequence[int]) -> None:
+    for place in places:
+        name = table.layout.columns[place].name
+        if _OTHER_NAMES.search(name):
+            raise _other_axis(table, place, name)
 
 
 def _refuse_other_axes(table: _Table, places: Sequence[int]) -> None:
