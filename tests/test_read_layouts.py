@@ -203,6 +203,28 @@ class TestHeadings:
         text = heading + "\n" + columns(lambda t, _d, o: f"{t * scale_t:.12g},{o * scale_v:.12g}")
         assert_even(read(tmp_path, text))
 
+    def test_units_in_brackets_in_a_row_of_their_own_above_an_empty_line(self, tmp_path: Path) -> None:
+        text = "Time,Channel A,Channel B\n(us),(mV),(mV)\n\n"
+        text += columns(lambda t, d, o: f"{t * 1e6:.9f},{d * 1e3:.6f},{o * 1e3:.6f}")
+        assert_even(read(tmp_path, text), drive=True)
+
+    def test_a_row_of_units_that_has_a_word_for_the_volts(self, tmp_path: Path) -> None:
+        text = "Vertical Units,CH1:V CH2:V\nSource,CH1,CH2\nSecond,Value,Value\n"
+        assert_even(read(tmp_path, text + columns(lambda t, d, o: f"{t:.9f},{d:.6f},{o:.6f}")), drive=True)
+
+    def test_a_sample_number_beside_the_time_is_no_channel(self, tmp_path: Path) -> None:
+        text = ",Time,CH1\n" + "".join(f"{i},{t:.12g},{o:.6g}\n" for i, (t, _, o) in enumerate(ROWS))
+        assert_even(read(tmp_path, text))
+
+    def test_uneven_simulated_steps_in_which_every_column_rises(self, tmp_path: Path) -> None:
+        times = np.sort(np.random.default_rng(4).uniform(-1e-7, 3e-7, 300))
+        rise, step = 1 / (1 + np.exp(-times / 2e-8)), 5.0 * (times > 0)
+        rows = zip(times.tolist(), rise.tolist(), step.tolist(), strict=True)
+        capture = read(tmp_path, "time\tV(out)\tV(in)\n" + "".join(f"{t!r}\t{v!r}\t{d!r}\n" for t, v, d in rows))
+        assert np.array_equal(capture.outputs[1].time_s, times)
+        assert capture.drive is not None
+        assert np.array_equal(capture.drive.signal_V, step)
+
     def test_quoted_headings_and_quoted_decimal_commas(self, tmp_path: Path) -> None:
         rows = columns(lambda t, _d, o: f'"{t * 1e6:.6f}";"{o:.6f}"').replace(".", ",").replace(";", ",")
         assert_even(read(tmp_path, '"time (us)","out (V)"\n' + rows))

@@ -239,7 +239,7 @@ class TestNoWaveform:
         refuse(tmp_path, "#Device: invented\n#Channels: 3\n" + rows, "line")
 
     def test_counts_of_a_converter(self, tmp_path: Path) -> None:
-        text = "Memory Length,200,\nSampling Period,4e-9,\nVertical Scale,0.1,\nWaveform Data,\n"
+        text = "Vertical Units,V\nSampling Period,4e-9,\nVertical Scale,0.1,\nWaveform Data,\n"
         text += "".join(f"{round(v * 100)},\n" for v in VOLT)
         refuse(tmp_path, text, "line 5", "counts or logic states, not volts", "whole numbers without a unit", "CH1 (V)")
 
