@@ -14,6 +14,7 @@ import numpy as np
 from scipy.linalg import toeplitz
 
 from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.waveform.binning import cut_rows, group_means
 from darkedge.analysis.waveform.edges import (
     TEN_NINETY,
     BoolArray,
@@ -166,15 +167,10 @@ def _cut_out(
     rough, rising = rough_s[which], changes.rising[which]
     first = np.searchsorted(time_s, start_s[which])
     length = np.searchsorted(time_s, stop_s[which], side="right") - first
-    group = np.maximum(1, -(-length // BINS))
-    entries = length // group
-    place = np.arange(int(np.max(entries)))
-    inside = place < entries[:, None]
-    begin = first[:, None] + group[:, None] * np.where(inside, place, 0)
-    end = begin + group[:, None]
-    upward = (_group_means(signal_V, begin, end) - levels.low_V) / levels.amplitude_V
+    begin, end, inside, group = cut_rows(first, length, most=BINS)
+    upward = (group_means(signal_V, begin, end) - levels.low_V) / levels.amplitude_V
     origin, unit = rough[:, 1], rough[:, 2] - rough[:, 0]
-    x = (_group_means(time_s, begin, end) - origin[:, None]) / unit[:, None]
+    x = (group_means(time_s, begin, end) - origin[:, None]) / unit[:, None]
     progress = np.where(rising[:, None], upward, 1.0 - upward)
     quarter = (rough - origin[:, None]) / unit[:, None]
     short = cut_short[which]
@@ -184,7 +180,7 @@ def _cut_out(
         which=which, rising=rising, mirrored=mirrored, cut_short=short, origin_s=origin, unit_s=unit,
         quarter=np.where(flip, -quarter[:, ::-1], quarter), x=np.where(flip, -x, x),
         progress=np.where(flip, 1.0 - progress, progress), weight=inside.astype(np.float64),
-        group=np.asarray(group, dtype=np.intp),
+        group=group,
     )  # fmt: skip
 
 
@@ -199,15 +195,11 @@ def _reach(time_s: FloatArray, rough_s: FloatArray) -> tuple[FloatArray, FloatAr
     start = np.minimum(np.maximum(before, settled), onset)
     start = np.maximum(start, np.concatenate(([time_s[0]], rough_s[:-1, 2])))
     next_onset = np.concatenate((onset[1:], [time_s[-1]]))
-    stop = np.maximum(np.minimum(rough_s[:, 2] + AFTER * unit, next_onset), rough_s[:, 2])
+    # About the last level something must be seen on both sides, even where the next edge may already begin.
+    next_early = np.concatenate((rough_s[1:, 0], [time_s[-1]]))
+    least = np.minimum(rough_s[:, 2] + REACHES[-1] * unit, 0.5 * (rough_s[:, 2] + next_early))
+    stop = np.maximum(np.minimum(rough_s[:, 2] + AFTER * unit, next_onset), least)
     return start, stop, next_onset - rough_s[:, 1] < CUT_SHORT_RATIO * late
-
-
-def _group_means(values: FloatArray, begin: IntArray, end: IntArray) -> FloatArray:
-    """Means of values[begin:end], for arrays of begins and ends."""
-    offset = values[0]
-    sums = np.concatenate(([0.0], np.cumsum(values - offset)))
-    return np.asarray((sums[end] - sums[begin]) / (end - begin) + offset)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

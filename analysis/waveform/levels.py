@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from darkedge.analysis.captures import FloatArray
 
@@ -14,6 +15,9 @@ FLAT_RATIO = 1e-9
 
 PLATEAU_SHARE = 0.25
 """Share of a half's samples near its mode that makes the mode a state; a ramp or a decaying tail has less."""
+
+INNER_SHARE, INNER_PLATEAU_SHARE = 0.3, 0.5
+"""Part of a half next to the middle, and the share that a mode there needs beside a true state in the other half."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -58,23 +62,41 @@ def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | 
     if top - bottom <= FLAT_RATIO * max(abs(top), abs(bottom)):
         return None
     counts, _ = np.histogram(values, bins=BINS, range=(bottom, top))
-    low = _mode_of_half(values, counts[: BINS // 2], bottom, top, extreme=bottom, offset=0)
-    high = _mode_of_half(values, counts[BINS // 2 :], bottom, top, extreme=top, offset=BINS // 2)
+    lower, upper = _mode(counts[: BINS // 2][::-1]), _mode(counts[BINS // 2 :])
+    # A decaying tail is dense next to the middle: beside a true state a mode there must hold half of its own half.
+    low_is_state = lower.holds(PLATEAU_SHARE if lower.outer or not upper.outer else INNER_PLATEAU_SHARE)
+    high_is_state = upper.holds(PLATEAU_SHARE if upper.outer or not lower.outer else INNER_PLATEAU_SHARE)
+    width = (top - bottom) / BINS
+    low = _about(values, bottom + (BINS // 2 - lower.place - 0.5) * width, width) if low_is_state else bottom
+    high = _about(values, bottom + (BINS // 2 + upper.place + 0.5) * width, width) if high_is_state else top
     return StateLevels(low_V=low, high_V=high) if high > low else None
 
 
-def _mode_of_half(
-    values: FloatArray, counts: np.ndarray, bottom: float, top: float, *, extreme: float, offset: int
-) -> float:
-    width = (top - bottom) / BINS
-    # A mode three bins wide: a level on the border of two bins is one level.
-    lumped = np.convolve(counts, np.ones(3), mode="same")
-    mode = int(np.argmax(lumped))
+@dataclass(frozen=True, slots=True, kw_only=True)
+class _Mode:
+    """Mode of one half of a histogram: its bin, counted from the middle outwards, and the share of the half near it."""
+
+    place: int
+    share: float
+
+    @property
+    def outer(self) -> bool:
+        """Whether it is a state for sure: away from the middle, with enough samples."""
+        return self.place >= BINS // 2 * INNER_SHARE and self.share >= PLATEAU_SHARE
+
+    def holds(self, share: float) -> bool:
+        return self.share >= share
+
+
+def _mode(counts: NDArray[np.intp]) -> _Mode:
+    # Three bins wide: a level on the border of two bins is one level.
+    place = int(np.argmax(np.convolve(counts, np.ones(3), mode="same")))
     reach = BINS // 20
-    near = int(np.sum(counts[max(mode - reach, 0) : mode + reach + 1]))
-    if near < PLATEAU_SHARE * int(np.sum(counts)):
-        return extreme
-    centre = bottom + (offset + mode + 0.5) * width
+    near = int(np.sum(counts[max(place - reach, 0) : place + reach + 1]))
+    return _Mode(place=place, share=near / max(int(np.sum(counts)), 1))
+
+
+def _about(values: FloatArray, centre: float, width: float) -> float:
     close = values[np.abs(values - centre) <= 2.5 * width]
     return float(np.mean(close)) if close.size else centre
 

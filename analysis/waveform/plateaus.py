@@ -10,13 +10,16 @@ from darkedge.analysis.captures import FloatArray
 from darkedge.analysis.waveform.edges import Changes, onsets
 from darkedge.analysis.waveform.levels import StateLevels
 from darkedge.analysis.waveform.noise import Noise, flat_noise, u_quantised_V
-from darkedge.analysis.waveform.peaks import peak_level
+from darkedge.analysis.waveform.peaks import local_peak, mean_peak
 
 SETTLED_RATIO = 2.75
 """Time from 50 % to the end of a pulse, over that from 50 % to 90 %, of a one-pole pulse of five time constants."""
 
 START_RATIO = 1.5
 """A plateau is used from this many times the 50 to 90 % time after the 50 % point: 3.1 time constants, 1.9 sigma."""
+
+SHORT_RATIO, SINKING_RATIO = 5.0, 0.02
+"""A plateau shorter than this many 50 to 90 % times that sinks by this share of the amplitude is the top of a peak."""
 
 HEAD_RATIO = 0.3
 """Length of the part before the first edge, in 10 to 90 % times of that edge, from which it counts as at rest."""
@@ -81,7 +84,11 @@ class _Span:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Draft:
-    """A plateau whose uncertainties still wait for the noise: `factor` is the variance in units of one sample's."""
+    """A plateau whose uncertainties still wait for the noise.
+
+    `factor` is the variance of the level in units of one sample's, `neighbours` how many samples stand together; `sinks_V`
+    is by how much the level from all of the plateau lies farther out than the one taken; `doubt_V` adds to the uncertainty.
+    """
 
     level_V: float
     factor: float
@@ -90,13 +97,15 @@ class _Draft:
     settled: bool
     sag_V: float = 0.0
     sag_factor: float = 0.0
+    sinks_V: float = 0.0
+    doubt_V: float = 0.0
 
     def finished(self, noise: Noise, amplitude_V: float, u_code_V: float) -> Plateau:
         inflation = noise.inflation(max(self.neighbours, 1))
         u = noise.sigma_V * float(np.sqrt(self.factor * inflation))
         u_sag = noise.sigma_V * float(np.sqrt(self.sag_factor * inflation))
         return Plateau(
-            level_V=self.level_V, u_level_V=float(np.hypot(u, u_code_V)), settled=self.settled,
+            level_V=self.level_V, u_level_V=float(np.sqrt(u**2 + u_code_V**2 + self.doubt_V**2)), settled=self.settled,
             sigma_V=_sigma(self.residuals_V), sag_ratio=self.sag_V / amplitude_V, u_sag_ratio=u_sag / amplitude_V,
         )  # fmt: skip
 
@@ -132,8 +141,13 @@ def refine_levels(
         Voltage of one code of the digitiser, 0 where unknown.
     """
     spans = _spans(time_s, changes, crossings_s)
+    at_rest = {
+        state: _at_rest(time_s, signal_V, [s for s in spans if s.high == state], high=state, noise=noise, levels=levels)
+        for state in (False, True)
+    }
     low, high = (
-        _draft(time_s, signal_V, [s for s in spans if s.high == state], high=state, noise=noise, levels=levels)
+        at_rest[state]
+        or _peaked(time_s, signal_V, crossings_s, spans, at_rest[not state], high=state, noise=noise, levels=levels)
         for state in (False, True)
     )
     noise = flat_noise([*low.residuals_V, *high.residuals_V], fallback_V=noise.sigma_V)
@@ -166,22 +180,24 @@ def _spans(time_s: FloatArray, changes: Changes, crossings_s: FloatArray) -> lis
     ]  # fmt: skip
 
 
-def _draft(
+def _at_rest(
     time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise, levels: StateLevels
-) -> _Draft:
+) -> _Draft | None:
+    """Level of a state from plateaus that settle; `None` where none does and pulses end before they might."""
     after = [s for s in spans if s.after_edge]
     heads = [s for s in spans if not s.after_edge and _is_head(time_s, s)]
     settled = [s for s in after if _settles(time_s, s)]
     if settled:
         tail = _tail_fit(time_s, signal_V, settled, high=high, noise=noise)
+        if tail.sinks_V > SINKING_RATIO * levels.amplitude_V and _is_short(time_s, settled):
+            return None  # past its peak already: no plateau, but the top of a pulse measured against too low a level
         if not heads:
             return tail
         head = _tail_fit(time_s, signal_V, heads[:1], high=high, noise=noise)
         return _join(tail, head, high=high, noise=noise, amplitude_V=levels.amplitude_V)
-    whole = [s for s in after if s.before_edge]
-    if heads and not whole:
+    if heads and not any(s.before_edge for s in after):
         return _tail_fit(time_s, signal_V, heads[:1], high=high, noise=noise)
-    return _peaks(time_s, signal_V, whole or after or spans, high=high, noise=noise, levels=levels)
+    return None
 
 
 def _is_head(time_s: FloatArray, span: _Span) -> bool:
@@ -193,6 +209,11 @@ def _is_head(time_s: FloatArray, span: _Span) -> bool:
 def _settles(time_s: FloatArray, span: _Span) -> bool:
     enough = span.stop - span.start >= 2
     return enough and bool(time_s[span.stop - 1] - span.middle_s >= SETTLED_RATIO * span.late_s)
+
+
+def _is_short(time_s: FloatArray, spans: list[_Span]) -> bool:
+    lasting = np.array([time_s[s.stop - 1] - s.middle_s for s in spans])
+    return float(np.median(lasting)) < SHORT_RATIO * float(np.median([s.late_s for s in spans]))
 
 
 def _tail_fit(time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise) -> _Draft:
@@ -211,12 +232,14 @@ def _tail_fit(time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, h
     own = float(np.median([s.late_s for s in spans])) / np.log(5)  # time constant, were the edge one pole
     tails = own * _TAIL_FACTORS
     tails = tails[tails >= 2 * length / max(min(bx.size, each), 1)]
-    fit = _earliest_that_agrees(_tail_fits(bx, by, weight, tails, length, own), noise, each)
+    fits = _tail_fits(bx, by, weight, tails, length, own)
+    fit = _earliest_that_agrees(fits, noise, each)
     sag, sag_factor = _sag(bx, by, weight, length)
     residuals = tuple(_residuals(time_s, signal_V, s, s.middle_s + begin, fit, offset) for s in spans)
     return _Draft(
         level_V=fit.level + offset, factor=fit.factor, neighbours=each, residuals_V=residuals, settled=True,
         sag_V=-sag if high else sag, sag_factor=sag_factor,
+        sinks_V=(fits[0].level - fit.level) * (1 if high else -1),
     )  # fmt: skip
 
 
@@ -347,16 +370,41 @@ def _join(tail: _Draft, head: _Draft, *, high: bool, noise: Noise, amplitude_V: 
     )  # fmt: skip
 
 
-def _peaks(
-    time_s: FloatArray, signal_V: FloatArray, spans: list[_Span], *, high: bool, noise: Noise, levels: StateLevels
+def _peaked(
+    time_s: FloatArray,
+    signal_V: FloatArray,
+    crossings_s: FloatArray,
+    spans: list[_Span],
+    rest: _Draft | None,
+    *,
+    high: bool,
+    noise: Noise,
+    levels: StateLevels,
 ) -> _Draft:
     """Level of pulses that never settle: the extreme that each reaches, meaned over the pulses."""
     sign = 1.0 if high else -1.0
-    found = []
-    for span in spans:
-        first, last = np.searchsorted(time_s, (span.middle_s, span.next_middle_s))
-        part = slice(int(first), max(int(last), int(first) + 2))
-        found.append(peak_level(time_s[part], sign * signal_V[part], noise=noise.sigma_V, amplitude=levels.amplitude_V))
-    values = np.array([value for value, _ in found])
-    factor = float(np.mean([factor for _, factor in found])) / len(found)
-    return _Draft(level_V=sign * float(np.mean(values)), factor=factor, neighbours=1, residuals_V=(), settled=False)
+    base = rest.level_V if rest else (levels.low_V if high else levels.high_V)
+    height = sign * (signal_V - base)
+    ends = np.array(
+        [k for k, s in enumerate(spans) if s.high == high and s.after_edge and s.before_edge], dtype=np.intp
+    )
+    if ends.size:
+        peak = mean_peak(
+            time_s, height, rises_s=crossings_s[ends - 1], falls_s=crossings_s[ends], noise=noise,
+            amplitude=levels.amplitude_V, from_rest=rest is not None,
+        )  # fmt: skip
+    else:
+        part = _open_stretch(time_s, spans, high=high)
+        peak = local_peak(time_s[part], height[part], noise=noise.sigma_V, amplitude=levels.amplitude_V)
+    neighbours = int(np.median([s.stop - s.start for s in spans if s.high == high]))
+    return _Draft(
+        level_V=base + sign * peak.value, factor=peak.factor, neighbours=max(neighbours, 1), residuals_V=(),
+        settled=False, doubt_V=peak.doubt,
+    )  # fmt: skip
+
+
+def _open_stretch(time_s: FloatArray, spans: list[_Span], *, high: bool) -> slice:
+    """Samples of the longest stretch in a state that an end of the record cuts off, from its edge's 50 % point on."""
+    longest = max((s for s in spans if s.high == high), key=lambda s: s.next_middle_s - s.middle_s)
+    first = min(int(np.searchsorted(time_s, longest.middle_s)), time_s.size - 1)
+    return slice(first, max(int(np.searchsorted(time_s, longest.next_middle_s, side="right")), first + 1))

@@ -22,21 +22,22 @@ from numpy.typing import NDArray
 from scipy.special import erfcx, ndtr
 
 from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.waveform.least_squares import fit_rows
 
 BoolArray = NDArray[np.bool_]
 
-ITERATIONS = 25
-LEAST_GAIN = 3e-5
-"""Share of the sum of squares that a step must win to be worth another: with the hundred-odd samples of an edge,
-a step that wins less moves no crossing by a tenth of its uncertainty."""
 _ROOT_HALF = float(np.sqrt(0.5))
 _ROOT_TWO_PI = float(np.sqrt(2 * np.pi))
-_LIMITS = (np.log(2e-3), np.log(20.0))
+FARTHEST = 1e8
+"""Distance from the start of an edge, in s, beyond which nothing changes; its square must stay a number."""
+
+LIMITS = (float(np.log(2e-3)), float(np.log(20.0)))
+"""Natural logarithms between which tau and s are sought, in units in which an edge is about 1 wide."""
 
 
 def shape_and_slope(x: FloatArray, x0: FloatArray, tau: FloatArray, s: FloatArray) -> tuple[FloatArray, FloatArray]:
     """F and E of the module's formulas, broadcast over all arguments; E / tau is the slope."""
-    z = (x - x0) / s
+    z = np.clip((x - x0) / s, -FARTHEST, FARTHEST)
     u = s / tau
     early = u > z
     scaled = 0.5 * np.exp(-0.5 * z * z) * erfcx(np.where(early, u - z, 0.0) * _ROOT_HALF)
@@ -117,14 +118,20 @@ def _unpacked(parameters: FloatArray) -> tuple[FloatArray, FloatArray, FloatArra
     )  # fmt: skip
 
 
+def shape_and_derivatives(
+    x: FloatArray, x0: FloatArray, tau: FloatArray, s: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """F and its derivatives by x0, ln tau and ln s, broadcast over all arguments (formulas of the module)."""
+    value, rest = shape_and_slope(x, x0, tau, s)
+    z, u = np.clip((x - x0) / s, -FARTHEST, FARTHEST), s / tau
+    bell = np.exp(-0.5 * z * z) / _ROOT_TWO_PI
+    return value, -rest / tau, -rest * ((x - x0) / tau - u * u) - bell * u, bell * u - rest * u * u
+
+
 def _model(x: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
     x0, tau, s, b = _unpacked(parameters)
-    value, rest = shape_and_slope(x, x0, tau, s)
-    z, u = (x - x0) / s, s / tau
-    bell = np.exp(-0.5 * z * z) / _ROOT_TWO_PI
-    by_tau = -rest * ((x - x0) / tau - u * u) - bell * u
-    jacobian = np.stack((-b * rest / tau, b * by_tau, b * (bell * u - rest * u * u), value), axis=1)
-    return b * value, jacobian
+    value, by_x0, by_tau, by_s = shape_and_derivatives(x, x0, tau, s)
+    return b * value, np.stack((b * by_x0, b * by_tau, b * by_s, value), axis=1)
 
 
 def _start(quarter: FloatArray) -> FloatArray:
@@ -152,63 +159,17 @@ def fit_shapes(
         Rough x at 10, 50 and 90 %.
     cut_short : array of bool, shape (n,)
         Edges whose asymptote is fitted.
-
-    References
-    ----------
-    Marquardt, J. SIAM 11, 431 (1963), with the damping on the scaled diagonal.
     """
-    parameters = _start(quarter)
-    free = np.ones_like(parameters)
+    start = _start(quarter)
+    free = np.ones(start.shape, dtype=np.bool_)
     free[:, 3] = cut_short
-    damping = np.full(x.shape[0], 1e-3)
-    value, jacobian = _model(x, parameters)
-    residual = progress - value
-    cost = np.sum(weight * residual**2, axis=1)
-    for _ in range(ITERATIONS):
-        normal, pull = _normal_equations(jacobian, residual, weight, free)
-        diagonal = np.einsum("eii->ei", normal)
-        damped = normal + (damping[:, None] * diagonal + 1e-12)[:, :, None] * np.eye(4)
-        step = np.linalg.solve(damped, pull[:, :, None])[:, :, 0] * free
-        tried = _bounded(parameters + np.clip(step, -1.0, 1.0))
-        new_value, new_jacobian = _model(x, tried)
-        new_residual = progress - new_value
-        new_cost = np.sum(weight * new_residual**2, axis=1)
-        better = new_cost <= cost
-        parameters = np.where(better[:, None], tried, parameters)
-        residual = np.where(better[:, None], new_residual, residual)
-        jacobian = np.where(better[:, None, None], new_jacobian, jacobian)
-        cost = np.where(better, new_cost, cost)
-        damping = np.clip(np.where(better, damping * 0.2, damping * 8.0), 1e-9, 1e9)
-        promised = np.sum(step * pull, axis=1)  # twice what the step would win, were the problem linear
-        if bool(np.all((promised <= LEAST_GAIN * cost) | (cost < 1e-14))):
-            break
-    return _finished(parameters, jacobian, residual, weight, free)
+    fits = fit_rows(_model, start, x, progress, weight, free=free, bounded=_bounded)
+    return EdgeShapes(
+        parameters=fits.parameters, jacobian=fits.jacobian, solver=fits.solver, residual=fits.residual, good=fits.good
+    )  # fmt: skip
 
 
 def _bounded(parameters: FloatArray) -> FloatArray:
-    parameters[:, 1:3] = np.clip(parameters[:, 1:3], *_LIMITS)
+    parameters[:, 1:3] = np.clip(parameters[:, 1:3], *LIMITS)
     parameters[:, 3] = np.clip(parameters[:, 3], 0.8, 20.0)
     return parameters
-
-
-def _normal_equations(
-    jacobian: FloatArray, residual: FloatArray, weight: FloatArray, free: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    weighted = jacobian * weight[:, None, :]
-    normal = weighted @ jacobian.transpose(0, 2, 1)
-    keep = free[:, :, None] * free[:, None, :]
-    normal = normal * keep + (1.0 - free)[:, :, None] * np.eye(4)
-    return normal, (weighted @ residual[:, :, None])[:, :, 0] * free
-
-
-def _finished(
-    parameters: FloatArray, jacobian: FloatArray, residual: FloatArray, weight: FloatArray, free: FloatArray
-) -> EdgeShapes:
-    jacobian = jacobian * free[:, :, None]
-    normal, _ = _normal_equations(jacobian, residual, weight, free)
-    # A ridge far below what any parameter that matters has: a width at its lower limit has no derivative.
-    ridge = 1e-6 * np.einsum("eii->ei", normal).max(axis=1)
-    inverse = np.linalg.inv(normal + ridge[:, None, None] * np.eye(4))
-    solver = inverse @ (jacobian * weight[:, None, :])
-    good = np.all(np.isfinite(solver), axis=(1, 2)) & np.all(np.isfinite(residual), axis=1)
-    return EdgeShapes(parameters=parameters, jacobian=jacobian, solver=solver, residual=residual, good=good)
