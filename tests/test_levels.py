@@ -31,7 +31,7 @@ def noise(n: int, seed: int) -> Array:
 
 
 def test_levels_are_the_modes_of_the_two_halves() -> None:
-    """Overshoot and undershoot are no part of the states. Source: IEEE Std 181-2011, 5.2."""
+    """Overshoot and undershoot are no part of the states. Source: the mode, as in IEEE Std 181-2011 (from memory)."""
     signal = np.concatenate((np.full(500, 0.2), [1.6, 1.4, 1.3], np.full(300, 1.2), [0.0, 0.1], np.full(500, 0.2)))
     levels = histogram_levels(signal)
     assert levels is not None

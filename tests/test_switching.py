@@ -47,7 +47,7 @@ def test_an_inverting_switch_is_timed_by_its_own_way_down_and_back() -> None:
     """t_d from the drive's 10 % to the output's first tenth; t_on to nine tenths; t_s and t_f the same on the way back.
 
     Drive ramps 50-52 us and 150-154 us, output 60-70 us down and 180-200 us up. Source: input edge at 10 % to output
-    edge at 10 % (JESD77 terms, delay time); t_on = t_d + t_r, t_off = t_s + t_f (IEC 60747-5 family).
+    edge at 10 % (JESD77 terms, delay time); t_on = t_d + t_r, t_off = t_s + t_f (IEC 60747-5 family, from memory).
     """
     found = measured(DRIVE, np.asarray(ramps(T, FALLING)))
     expected = {
@@ -69,7 +69,7 @@ def test_an_emitter_resistor_is_timed_on_its_way_up() -> None:
 
 
 def test_on_and_off_times_are_delay_and_edge_together() -> None:
-    """t_on = t_d + t_r and t_off = t_s + t_f. Source: IEC 60747-5 family."""
+    """t_on = t_d + t_r and t_off = t_s + t_f: arithmetic of the definitions (IEC 60747-5 family, from memory)."""
     found = measured(DRIVE, np.asarray(ramps(T, FALLING)))
     on, delay, fall = (found.value(n) or 0.0 for n in ("on_time_s", "on_delay_s", "fall_time_s"))
     off, storage, rise = (found.value(n) or 0.0 for n in ("off_time_s", "storage_time_s", "rise_time_s"))
@@ -91,7 +91,7 @@ def test_turn_on_alone_gives_turn_on_alone() -> None:
 
 
 def test_a_saturated_coupler_has_only_a_lower_bound_of_its_transfer_ratio() -> None:
-    """4.6 V over 1 kohm from 10 mA is 0.46, but more light would show no more. Source: IEC 60747-5-5, transfer ratio."""
+    """4.6 V over 1 kohm from 10 mA is 0.46, but more light would show no more: collector over emitter current."""
     kind = {"device_kind": DeviceKind.OPTOCOUPLER, "emitter_current_A": 0.01}
     ratio = measured(DRIVE, np.asarray(ramps(T, FALLING)), **kind).quantities["current_transfer_ratio"]
     assert ratio.value is None

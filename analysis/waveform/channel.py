@@ -68,7 +68,7 @@ def measure_channel(
 
     References
     ----------
-    IEEE Std 181-2011: state levels (5.2), reference level instants and transition durations (5.3).
+    IEEE Std 181-2011: state levels, reference level instants, transition durations.
     """
     signal, time = record.signal_V, record.time_s
     step = code_step_V(signal, volts_per_code)

@@ -85,7 +85,7 @@ def locate_crossings(
 
     References
     ----------
-    IEEE Std 181-2011, 5.3, reference level instants.
+    IEEE Std 181-2011, reference level instants.
     """
     rough = rough_crossings(time_s, signal_V, levels=levels, changes=changes)
     straight = _straight_lines(

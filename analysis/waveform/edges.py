@@ -116,7 +116,7 @@ def rough_crossings(
     The instant parts the samples below a level from those above it so that the fewest lie on the wrong side: the
     minimum of the running sum of progress minus level, bounded so that far samples count no more than near ones.
     Noise moves it either way alike, where the first sample past a level would always be early. Between
-    the two samples the crossing is interpolated, as in IEEE Std 181-2011, 5.3.
+    the two samples the crossing is interpolated, as in IEEE Std 181-2011.
     """
     borders = changes.borders(signal_V.size)
     upward = (signal_V - levels.low_V) / levels.amplitude_V

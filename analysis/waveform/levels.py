@@ -55,7 +55,7 @@ def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | 
 
     References
     ----------
-    IEEE Std 181-2011, 5.2, state levels by histogram (mode).
+    IEEE Std 181-2011, state levels by histogram (mode).
     """
     values = running_mean(signal_V, smooth)
     bottom, top = float(np.min(values)), float(np.max(values))
