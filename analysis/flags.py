@@ -116,8 +116,8 @@ _ALL = (
     ),
     Flag(
         code="noise_unknown",
-        sentence="The flat parts are too short to tell the noise; uncertainties are rough.",
-        mend="Capture more of the flat parts before and after the edge.",
+        sentence="The flat parts, or a still trace, are too short or too still to tell the noise; uncertainties are rough.",
+        mend="Capture more of the flat parts before and after the edge; still traces over 100 ms, on a finer range.",
     ),
     Flag(
         code="probe_doubtful",
@@ -163,6 +163,11 @@ _ALL = (
         code="emitter_current_differs",
         sentence="The emitter current is not that at which the bench response was taken.",
         mend="Take the bench response at this emitter current.",
+    ),
+    Flag(
+        code="offset_doubtful",
+        sentence="The offset of the dark trace is not known, or does not belong to it: what is left is below zero, or saw more light.",
+        mend="Take offset traces at zero bias with the same load and range, between the dark traces; check the channel's polarity.",
     ),
 )
 

@@ -8,7 +8,8 @@ from dataclasses import dataclass, replace
 from datetime import date, datetime
 
 from darkedge.analysis.captures import Capture, Conditions, Kind
-from darkedge.analysis.dark.traces import TraceSummary, dark_current, summarise_trace
+from darkedge.analysis.dark.current import dark_current
+from darkedge.analysis.dark.traces import TraceSummary, summarise_trace
 from darkedge.analysis.errors import DarkedgeError
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
