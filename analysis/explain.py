@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 
 from darkedge.analysis.captures import DeviceKind, Kind
 from darkedge.analysis.dark.model import fit_dark_current
-from darkedge.analysis.dark.results import DarkFit
+from darkedge.analysis.dark.results import ASSUMED, DarkFit, Depletion
 from darkedge.analysis.decide.choose import choose
 from darkedge.analysis.decide.results import Choice, Wish
 from darkedge.analysis.errors import DarkedgeError, FitError
@@ -91,7 +91,6 @@ def explain_devices(
             errors.append(error)
             continue
         shortest, widths = shortest_pulses(rows)
-        dark = fit_dark_current(rows, fixture=fixture)
         kind = next((r.conditions.device_kind for r in rows if r.conditions.device_kind is not None), None)
         junction = None
         if kind not in TRANSISTOR_OUTPUTS and _has_pulses(rows):
@@ -99,6 +98,7 @@ def explain_devices(
                 junction = fit_junction(rows, fixture=fixture)
             except FitError as error:
                 errors.append(error)
+        dark = fit_dark_current(rows, fixture=fixture, depletion=_depletion(junction))
         devices.append(
             ExplainedDevice(
                 lot=lot,
@@ -163,6 +163,15 @@ def _by_device(
         key = row.conditions.lot, row.conditions.device, row.element
         groups.setdefault(key, []).append(row)
     return groups
+
+
+def _depletion(junction: JunctionFit | None) -> Depletion:
+    """How the depletion width grows by the junction fit, or the assumption of the dark fit where there is none."""
+    values = {} if junction is None else {name: e.value for name, e in junction.parameters.items()}
+    v_bi_V, grading = values.get("v_bi_V"), values.get("grading")
+    if v_bi_V is None or grading is None:
+        return ASSUMED
+    return Depletion(v_bi_V=v_bi_V, grading=grading, full_depletion_V=values.get("full_depletion_V"))
 
 
 def _has_pulses(rows: Sequence[Measurement]) -> bool:
