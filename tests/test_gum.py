@@ -56,10 +56,26 @@ def test_a_calibration_line_predicts_with_its_correlation() -> None:
     assert np.sqrt(spread[0, 0]) == pytest.approx(0.0041, abs=5e-5)
 
 
-@pytest.mark.parametrize(
-    ("probability", "freedom", "printed"),
-    [(0.95, 1, 12.71), (0.95, 5, 2.57), (0.95, 16, 2.12), (0.99, 16, 2.92), (0.9545, 10, 2.28), (0.95, np.inf, 1.960)],
-)
-def test_coverage_factors_are_those_of_table_g2(probability: float, freedom: float, printed: float) -> None:
+def test_a_calibration_line_without_its_correlation_gives_nearly_twice_the_uncertainty() -> None:
+    """Source: JCGM 100:2008, H.3, whose 0.0041 becomes 0.0073 where the correlation of -0.930 is dropped (recomputed)."""
+    _, spread = propagate(
+        lambda x: np.array([x[0] + 10 * x[1]]), np.array([-0.1712, 0.00218]), np.diag([0.0029**2, 0.00067**2])
+    )
+    assert np.sqrt(spread[0, 0]) == pytest.approx(0.0073, abs=5e-5)
+
+
+FREEDOMS = (1, 2, 3, 5, 8, 10, 16, 20, 50, np.inf)
+TABLE_G2 = {
+    0.6827: (1.84, 1.32, 1.20, 1.11, 1.07, 1.05, 1.03, 1.03, 1.01, 1.000),
+    0.95: (12.71, 4.30, 3.18, 2.57, 2.31, 2.23, 2.12, 2.09, 2.01, 1.960),
+    0.9545: (13.97, 4.53, 3.31, 2.65, 2.37, 2.28, 2.17, 2.13, 2.05, 2.000),
+    0.99: (63.66, 9.92, 5.84, 4.03, 3.36, 3.17, 2.92, 2.85, 2.68, 2.576),
+    0.9973: (235.78, 19.21, 9.22, 5.51, 4.28, 3.96, 3.54, 3.42, 3.16, 3.000),
+}
+
+
+@pytest.mark.parametrize("probability", TABLE_G2)
+def test_coverage_factors_are_those_of_table_g2(probability: float) -> None:
     """Source: JCGM 100:2008, table G.2."""
-    assert coverage_factor(probability, freedom) == pytest.approx(printed, abs=5e-3)
+    found = [coverage_factor(probability, freedom) for freedom in FREEDOMS]
+    assert found == pytest.approx(TABLE_G2[probability], abs=5e-3)  # half a unit of the last digit printed

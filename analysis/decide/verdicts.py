@@ -9,7 +9,7 @@ import numpy as np
 from scipy import stats
 
 from darkedge.analysis.captures import Kind
-from darkedge.analysis.columns import ALL_QUANTITIES, CONDITIONS
+from darkedge.analysis.columns import ALL_QUANTITIES, CONDITIONS, DEVICE
 from darkedge.analysis.decide.results import DeviceVerdict, Limit, Limits, LimitVerdict, Rule, Screening, Verdict
 from darkedge.analysis.errors import LimitError
 from darkedge.analysis.lot.verdict import lot_verdicts
@@ -18,6 +18,9 @@ from darkedge.analysis.quantities import format_quantity, unit_of
 from darkedge.analysis.uncertainty import coverage_factor
 
 _BOUND_CONFIDENCE = 0.95
+_NUMBERS = (*CONDITIONS, "element", "driven_element")
+_WORDS = ("run", "kind", "device", "lot", "reference", *DEVICE)
+_SAME_TEMPERATURE_K = 5.0
 Where = tuple[str | None, str | None, int | None]
 
 
@@ -32,18 +35,16 @@ def conformity_probability(estimate: Estimate, limit: Limit) -> float | None:
     """
     if estimate.value is None or estimate.u is None:
         return None
-    if estimate.u == 0.0:
-        return float(_inside(estimate.value, limit))
-    below = 1.0 if limit.upper is None else float(stats.norm.cdf((limit.upper - estimate.value) / estimate.u))
-    under = 0.0 if limit.lower is None else float(stats.norm.cdf((limit.lower - estimate.value) / estimate.u))
-    return max(0.0, below - under)
+    below, above = _outside(estimate.value, estimate.u, limit)
+    return max(0.0, 1.0 - below - above)
 
 
 def judge(estimate: Estimate, limit: Limit, *, rule: Rule, confidence: float) -> Verdict:
     """Hold one estimate against one limit.
 
-    Simple: by the value alone. Guarded: pass where the probability of conforming is at least `confidence`, fail where that of not
-    conforming is, else undecided. A bound alone decides only where it clears the limit, at 95 % confidence.
+    Simple: by the value alone. Guarded: pass where the probability of conforming is at least `confidence`, fail where that of
+    lying beyond one of the limits is, else undecided (so a measurement too rough for a narrow pair of limits fails nothing). A
+    bound alone decides only where it clears the limit, or lies beyond it; guarded at up to 95 % confidence, which is that of the bound.
 
     References
     ----------
@@ -51,32 +52,40 @@ def judge(estimate: Estimate, limit: Limit, *, rule: Rule, confidence: float) ->
     """
     probability = conformity_probability(estimate, limit)
     if probability is None:
-        return _by_bound(estimate, limit, confidence)
+        return (
+            _by_bound(estimate, limit) if rule is Rule.SIMPLE or confidence <= _BOUND_CONFIDENCE else Verdict.UNDECIDED
+        )
     assert estimate.value is not None
+    assert estimate.u is not None
     if rule is Rule.SIMPLE:
         return Verdict.PASS if _inside(estimate.value, limit) else Verdict.FAIL
     if probability >= confidence:
         return Verdict.PASS
-    return Verdict.FAIL if 1 - probability >= confidence else Verdict.UNDECIDED
+    return Verdict.FAIL if max(_outside(estimate.value, estimate.u, limit)) >= confidence else Verdict.UNDECIDED
 
 
 def screen(measurements: Sequence[Measurement], limits: Limits) -> Screening:
     """Hold every device and element against every limit.
 
     A limit applies to the rows whose conditions are those under `when`: numbers within `tolerance_ratio`, words equal; a row that
-    lacks the condition does not match. Rows that match and agree in all other conditions are repeats: their mean
-    is judged, with the larger of their uncertainty and that of their scatter. Rows that differ in conditions which the limit leaves open
-    are judged each, and the worst counts. No matching row leaves the limit undecided, in words.
+    lacks the condition does not match, and offset and reference captures never do. Rows that match and agree in all other conditions
+    (temperature to about 5 K) are repeats: their mean is judged, with the larger of their uncertainty and that of their scatter. Rows that differ in
+    conditions which the limit leaves open, and rows that name no device (they may be of several), are judged each, and the
+    worst counts. No matching row leaves the limit undecided, in words; so does a quantity that could not be had. A refused
+    file keeps the whole from passing.
 
     Raises
     ------
     LimitError
-        A limit on something that is no quantity of the measurement table, or without a bound.
+        A limit on something that is no quantity of the measurement table, under something that is no condition, or without
+        bounds that leave room; a confidence not between 0.5 and 1; no device at all.
+
+    References
+    ----------
+    JCGM 106:2012, 8; JCGM 100:2008, 4.2.3 and G.3 for the mean of repeats.
     """
-    for limit in limits.limits:
-        if limit.quantity not in ALL_QUANTITIES or (limit.lower is None and limit.upper is None):
-            raise LimitError("not a limit on a quantity", found=limit.quantity)
-    devices = [_device_verdict(where, rows, limits) for where, rows in _devices(measurements).items()]
+    _check(limits)
+    devices = [_device_verdict(where, rows, limits, measurements) for where, rows in _devices(measurements).items()]
     if not devices:
         raise LimitError("no device was measured", wanted="captures of at least one device", mend="check the path")
     lots = lot_verdicts(devices)
@@ -85,33 +94,70 @@ def screen(measurements: Sequence[Measurement], limits: Limits) -> Screening:
     return Screening(devices=tuple(devices), lots=lots, verdict=verdict, rule=limits.rule, confidence=limits.confidence)
 
 
+def _check(limits: Limits) -> None:
+    if not 0.5 < limits.confidence < 1:
+        raise LimitError("confidence is not between 0.5 and 1", found=f"{limits.confidence:g}", wanted="such as 0.95")
+    for limit in limits.limits:
+        if limit.quantity not in ALL_QUANTITIES:
+            raise LimitError("not a quantity of the measurement table", found=repr(limit.quantity))
+        low, high = limit.lower, limit.upper
+        if low is None and high is None:
+            raise LimitError("a limit without a bound", where=limit.quantity, wanted="lower, upper, or both")
+        if low is not None and high is not None and not low < high:
+            raise LimitError("lower is not below upper", where=limit.quantity, found=f"{low:g} and {high:g}")
+        for key, wanted in limit.when.items():
+            _check_condition(limit.quantity, key, wanted)
+
+
+def _check_condition(quantity: str, key: str, wanted: float | str) -> None:
+    where = f"{quantity}, when"
+    if key not in _NUMBERS + _WORDS:
+        raise LimitError("not a condition", where=where, found=repr(key), wanted=", ".join(_NUMBERS + _WORDS))
+    if isinstance(wanted, str) != (key in _WORDS):
+        kind = "a word" if key in _WORDS else f"a number in {unit_of(key).symbol}".rstrip()
+        raise LimitError(f"{key} has the wrong kind of value", where=where, found=repr(wanted), wanted=kind)
+
+
 def _inside(value: float, limit: Limit) -> bool:
     return (limit.lower is None or value >= limit.lower) and (limit.upper is None or value <= limit.upper)
 
 
-def _by_bound(estimate: Estimate, limit: Limit, confidence: float) -> Verdict:
+def _outside(value: float, u: float, limit: Limit) -> tuple[float, float]:
+    """Probabilities of lying below the lower and above the upper limit."""
+    if u == 0.0:
+        return float(limit.lower is not None and value < limit.lower), float(
+            limit.upper is not None and value > limit.upper
+        )
+    below = 0.0 if limit.lower is None else float(stats.norm.cdf((limit.lower - value) / u))
+    above = 0.0 if limit.upper is None else float(stats.norm.cdf((value - limit.upper) / u))
+    return below, above
+
+
+def _by_bound(estimate: Estimate, limit: Limit) -> Verdict:
     low = -math.inf if estimate.lo95 is None else estimate.lo95
     high = math.inf if estimate.hi95 is None else estimate.hi95
     if (limit.upper is not None and low > limit.upper) or (limit.lower is not None and high < limit.lower):
-        return Verdict.FAIL if confidence <= _BOUND_CONFIDENCE else Verdict.UNDECIDED
+        return Verdict.FAIL
     clears_upper = limit.upper is None or high <= limit.upper
     clears_lower = limit.lower is None or low >= limit.lower
-    if clears_upper and clears_lower and confidence <= _BOUND_CONFIDENCE:
-        return Verdict.PASS
-    return Verdict.UNDECIDED
+    return Verdict.PASS if clears_upper and clears_lower else Verdict.UNDECIDED
 
 
 def _devices(measurements: Sequence[Measurement]) -> dict[Where, list[Measurement]]:
     groups: dict[Where, list[Measurement]] = {}
     for row in measurements:
-        if "refused" in row.flags:
+        if "refused" in row.flags or row.conditions.kind in (Kind.OFFSET, Kind.REFERENCE):
             continue
         groups.setdefault((row.conditions.lot, row.conditions.device, row.element), []).append(row)
     return groups
 
 
-def _device_verdict(where: Where, rows: Sequence[Measurement], limits: Limits) -> DeviceVerdict:
-    held = tuple(_limit_verdict(rows, limit, limits) for limit in limits.limits)
+def _device_verdict(
+    where: Where, rows: Sequence[Measurement], limits: Limits, everything: Sequence[Measurement]
+) -> DeviceVerdict:
+    folders = {_folder(row) for row in rows}
+    refused = sum("refused" in row.flags and _folder(row) in folders for row in everything)
+    held = tuple(_limit_verdict(rows, limit, limits, refused) for limit in limits.limits)
     return DeviceVerdict(
         lot=where[0],
         device=where[1],
@@ -121,15 +167,22 @@ def _device_verdict(where: Where, rows: Sequence[Measurement], limits: Limits) -
     )
 
 
-def _limit_verdict(rows: Sequence[Measurement], limit: Limit, limits: Limits) -> LimitVerdict:
-    wanted = Kind.DARK if limit.quantity == "dark_current_A" else None
-    kinds = (Kind.DARK,) if wanted else (Kind.PULSE, None)
-    matching = [row for row in rows if row.conditions.kind in kinds and _matches(row, limit)]
+def _folder(row: Measurement) -> str:
+    return row.capture.rpartition("/")[0]
+
+
+def _limit_verdict(rows: Sequence[Measurement], limit: Limit, limits: Limits, refused: int) -> LimitVerdict:
+    of_kind = [row for row in rows if _shows(row, limit.quantity)]
+    matching = [row for row in of_kind if _matches(row, limit)]
     if not matching:
+        reason = _nothing_measured(limit, of_kind)
+        if refused:
+            reason += (
+                f"; {refused} file{'s' if refused > 1 else ''} beside it {'were' if refused > 1 else 'was'} refused"
+            )
         return LimitVerdict(
-            limit=limit, verdict=Verdict.UNDECIDED, estimate=None, probability_conforming=None,
-            reason=_nothing_measured(limit, "dark trace" if wanted else "pulse capture"),
-        )  # fmt: skip
+            limit=limit, verdict=Verdict.UNDECIDED, estimate=None, probability_conforming=None, reason=reason
+        )
     each = [_judge_repeats(repeats, limit, limits) for repeats in _repeats(matching)]
     order = {Verdict.FAIL: 0, Verdict.UNDECIDED: 1, Verdict.PASS: 2}
     return min(
@@ -137,11 +190,18 @@ def _limit_verdict(rows: Sequence[Measurement], limit: Limit, limits: Limits) ->
     )
 
 
+def _shows(row: Measurement, quantity: str) -> bool:
+    """Whether a row is of the kind that can carry a quantity: a dark trace for the dark current, a pulse for all others."""
+    if quantity == "dark_current_A":
+        return row.conditions.kind is Kind.DARK or quantity in row.quantities
+    return row.conditions.kind in (Kind.PULSE, None)
+
+
 def _judge_repeats(repeats: Sequence[Measurement], limit: Limit, limits: Limits) -> LimitVerdict:
     captures = tuple(row.capture for row in repeats)
     estimate = _mean(repeats, limit.quantity)
     if estimate is None:
-        flags = sorted({flag for row in repeats for flag in row.flags})
+        flags = sorted({flag for row in repeats if limit.quantity not in row.quantities for flag in row.flags})
         reason = f"not measured: {', '.join(flags)}" if flags else "the capture does not show this quantity"
         return LimitVerdict(
             limit=limit, verdict=Verdict.UNDECIDED, estimate=None, probability_conforming=None, captures=captures,
@@ -174,10 +234,12 @@ def _matches(row: Measurement, limit: Limit) -> bool:
 def _repeats(rows: Sequence[Measurement]) -> list[list[Measurement]]:
     """Rows grouped by all conditions that the bench sets; the temperature is not set, and varies a little."""
     groups: dict[tuple[object, ...], list[Measurement]] = {}
-    settings = [name for name in CONDITIONS if name != "temperature_degC"]
+    settings = ("device", "driven_element", "reference", *(name for name in CONDITIONS if name != "temperature_degC"))
     for row in rows:
-        key = tuple(getattr(row.conditions, name) for name in settings)
-        groups.setdefault((*key, row.conditions.driven_element), []).append(row)
+        known = row.conditions
+        warm = None if known.temperature_degC is None else round(known.temperature_degC / _SAME_TEMPERATURE_K)
+        alone = row.capture if known.device is None else None
+        groups.setdefault((*(getattr(known, name) for name in settings), warm, alone), []).append(row)
     return list(groups.values())
 
 
@@ -208,19 +270,30 @@ def _joint_bound(estimates: Sequence[Estimate]) -> Estimate | None:
     return None if high is None and low is None else Estimate(hi95=high, lo95=low)
 
 
-def _nothing_measured(limit: Limit, what: str) -> str:
+def _nothing_measured(limit: Limit, rows: Sequence[Measurement]) -> str:
+    what = "dark trace" if limit.quantity == "dark_current_A" else "pulse capture"
     when = ", ".join(
         f"{key} = {value if isinstance(value, str) else format_quantity(value, unit_of(key).symbol)}"
         for key, value in limit.when.items()
     )
-    return f"no {what}" + (f" at {when}" if when else "")
+    silent = [
+        f"{count} do not state {key}" if count > 1 else f"one does not state {key}"
+        for key in limit.when
+        if key != "element" and (count := sum(getattr(row.conditions, key) is None for row in rows))
+    ]
+    return f"no {what}" + (f" at {when}" if when else "") + "".join(f"; {words}" for words in silent)
 
 
 def _reason(verdict: Verdict, estimate: Estimate, probability: float | None, limit: Limit, limits: Limits) -> str:
     if verdict is Verdict.PASS:
         return ""
     if probability is None:
-        return "only a bound is known, and it does not clear the limit"
+        beyond = verdict is Verdict.FAIL
+        return (
+            "the bound known lies beyond the limit"
+            if beyond
+            else "only a bound is known, and it does not clear the limit"
+        )
     if verdict is Verdict.UNDECIDED:
         return (
             f"the uncertainty reaches over the limit: conforms with {100 * probability:.1f} %, "
