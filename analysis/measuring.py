@@ -43,12 +43,12 @@ class _Still:
         """What a dark trace and its offset traces have in common."""
         known = self.conditions
         folder = self.name.rpartition("/")[0]
-        return folder, known.run, known.lot, known.device, self.element, known.load_ohm
+        return folder, known.run, known.lot, known.device, self.element, known.load_ohm, known.volts_per_code
 
     @property
     def order(self) -> tuple[str, str]:
         """Order in which the traces of a run were taken."""
-        return self.conditions.point or "", self.name
+        return (self.conditions.point or "").zfill(9), self.name
 
 
 def refused_measurement(name: str) -> Measurement:
@@ -66,7 +66,7 @@ def measure_captures(
 
     Pulse and reference captures (and captures that do not say their kind) are measured as pulses. A dark
     trace is held against the offset traces taken just before and just after it in the same run, with the
-    same device, element and load. Waveforms are not kept: memory stays that of one capture.
+    same device, element, load and range. Waveforms are not kept: memory stays that of one capture.
 
     Parameters
     ----------

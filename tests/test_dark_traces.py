@@ -1,17 +1,22 @@
 """Dark current: what a still trace says, and what is left of it when the offset is taken off."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
-from darkedge.analysis.captures import Conditions, FloatArray, OutputConnection, TimedRecord, Waveform
+from darkedge.analysis.captures import Capture, Conditions, FloatArray, Kind, OutputConnection, TimedRecord, Waveform
 from darkedge.analysis.dark.current import dark_current, junction_bias
 from darkedge.analysis.dark.mains import find_ripple
 from darkedge.analysis.dark.traces import TraceSummary, summarise_trace
 from darkedge.analysis.dark.wander import u_of_mean
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture, Load
+from darkedge.analysis.flags import join_flags
 from darkedge.analysis.measurement import Estimate
+from darkedge.analysis.measuring import measure_captures
 
 STEP_V = 4e-5
 SIZE = 1000
@@ -388,3 +393,60 @@ def test_the_drop_across_the_resistor_comes_off_the_bias_and_is_flagged_where_it
     _, large = dark_current(still(rng, 7.0), [still(rng)], conditions=SENSED, fixture=FIXTURE)
     assert "bias_used_up" not in small
     assert "bias_used_up" in large
+
+
+voltages = st.floats(-1e3, 1e3, allow_subnormal=False)
+shapes = st.lists(voltages, min_size=2, max_size=60) | st.builds(
+    lambda level, pattern: [level + x for x in pattern] * 9,
+    voltages,
+    st.lists(st.sampled_from([0.0, 1e-3, 2e-3]), min_size=2),
+)
+
+
+@given(
+    dark=shapes, offset=shapes, dt_s=st.sampled_from([1e-6, 1e-3, 5e-3, 1.0]), code_V=st.sampled_from([None, 1e-3]),
+    connection=st.sampled_from([None, *OutputConnection]), input_ohm=st.sampled_from([None, 50.0, 1e6]),
+)  # fmt: skip
+def test_whatever_the_trace_a_current_is_a_value_above_its_uncertainty_a_bound_above_zero_or_nothing(
+    dark: list[float],
+    offset: list[float],
+    dt_s: float,
+    code_V: float | None,
+    connection: OutputConnection | None,
+    input_ohm: float | None,
+) -> None:
+    conditions = Conditions(
+        bias_V=12.0, load_ohm=1e6, input_ohm=input_ohm, volts_per_code=code_V, output_connection=connection
+    )
+    traces = [summarise_trace(Waveform(signal_V=np.array(x), dt_s=dt_s), conditions) for x in (dark, offset)]
+    current, flags = dark_current(traces[0], traces[1:], conditions=conditions, fixture=UNKNOWN_FIXTURE)
+    join_flags(flags)  # all are in the registry
+    if current is None:
+        assert flags
+    elif current.value is None:
+        assert current.hi95 > 0
+    else:
+        assert current.value > current.u > 0
+
+
+def test_offset_traces_are_those_just_before_and_after_on_the_same_range() -> None:
+    """Points count as numbers, 10 after 9; an offset trace on another range is none of this trace."""
+    rng = np.random.default_rng(41)
+
+    def capture(point: str, kind: Kind, level_V: float, code_V: float = STEP_V) -> Capture:
+        return Capture(
+            name=f"captures/{point}.csv",
+            outputs={1: Waveform(signal_V=coded(rng.normal(level_V, NOISE_V, SIZE)), dt_s=SPAN_S / SIZE)},
+            conditions=replace(SENSED, kind=kind, point=point, volts_per_code=code_V),
+        )
+
+    captures = [
+        capture("2", Kind.OFFSET, 0.3),
+        capture("8", Kind.OFFSET, 0.1),
+        capture("9", Kind.DARK, 0.101),
+        capture("9a", Kind.OFFSET, 0.7, 2 * STEP_V),
+        capture("10", Kind.OFFSET, 0.1),
+        capture("11", Kind.OFFSET, 0.5),
+    ]
+    measurements, _ = measure_captures(captures)
+    assert measurements[2].value("dark_current_A") == pytest.approx(1e-3 / RESISTANCE_OHM, rel=0.05)

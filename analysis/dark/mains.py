@@ -73,7 +73,8 @@ def without_ripple(time_s: FloatArray, signal_V: FloatArray, ripple: Ripple | No
 
 
 def _thinned(time_s: FloatArray, signal_V: FloatArray) -> tuple[FloatArray, FloatArray]:
-    each = max(1, int(_THIN_S / ((time_s[-1] - time_s[0]) / (time_s.size - 1))))
+    step_s = float(time_s[-1] - time_s[0]) / (time_s.size - 1)
+    each = max(1, min(int(_THIN_S / step_s), time_s.size // 2))
     kept = time_s.size // each * each
     return time_s[:kept].reshape(-1, each).mean(axis=1), signal_V[:kept].reshape(-1, each).mean(axis=1)
 

@@ -19,6 +19,8 @@ _DRIFT_U = 20.0
 """Drift from end to end, over what is left of u without it, from which a trace drifts: noise of any colour reaches it in one trace of a
 hundred at most (white noise has sqrt 12 at one standard deviation, slower noise less)."""
 _DITHERED_CODES = 3.0
+_SAME_VALUE_RATIO = 1e-9
+"""Values closer than this differ by arithmetic, not by a code."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -113,8 +115,9 @@ def _whole_periods(time_s: FloatArray, dt_s: float, mains_Hz: float | None) -> i
 
 def _code_step(signal_V: FloatArray) -> float:
     """Smallest step between different values of a trace: its code, or rounding in the file; 0 where all are equal."""
-    values = np.unique(signal_V)
-    return float(np.diff(values).min()) if values.size > 1 else 0.0
+    steps = np.diff(np.unique(signal_V))
+    steps = steps[steps > _SAME_VALUE_RATIO * float(np.max(np.abs(signal_V)))]
+    return float(steps.min()) if steps.size else 0.0
 
 
 def _quantisation(step_V: float, noise_V: float, spread_V: float, averages: int) -> float:
