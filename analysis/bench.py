@@ -17,21 +17,27 @@ class BiasSource(StrEnum):
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class OscilloscopeLink:
-    """The oscilloscope: `channels` maps a signal (`drive`, `output`, `output2` ...) to a scope channel."""
+    """The oscilloscope: `channels` maps a signal (`drive`, `output`, `output2` ...) to a scope channel.
+
+    `points` and `averages` are what each record is asked for with.
+    """
 
     address: str
     dialect: str
     channels: Mapping[str, int]
     probe_ratio: Mapping[str, float] = field(default_factory=dict)
+    points: int = 2000
+    averages: int = 16
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class GeneratorLink:
-    """The function generator: one channel for the emitter of each element."""
+    """The function generator: one channel for the emitter of each element, behind `source_ohm`."""
 
     address: str
     dialect: str
     emitter_channels: tuple[int, ...] = (1,)
+    source_ohm: float = 50.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -45,6 +51,7 @@ class BiasLink:
     source_ohm: float = 0.0
     decoupling_F: float = 0.0
     compliance_A: float | None = None
+    ramp_V_per_s: float = 20.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

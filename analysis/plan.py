@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from enum import StrEnum
 from itertools import product
 
-from darkedge.analysis.captures import DeviceKind, OutputConnection, Reference
+from darkedge.analysis.captures import DeviceKind, Kind, OutputConnection, Reference
 
 
 class EmitterKind(StrEnum):
@@ -115,8 +115,31 @@ class Point:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Step:
+    """One thing that the sweep takes: a pulse point, or a dark or offset trace. `number` is its place in the plan, from 1."""
+
+    number: int
+    kind: Kind
+    load_ohm: float
+    bias_V: float
+    element: int | None = None
+    emitter_current_A: float | None = None
+    pulse_width_s: float | None = None
+    repeat: int = 1
+
+    @property
+    def name(self) -> str:
+        """How the point is called in captures and journal."""
+        return f"{self.number:04d}"
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Plan:
-    """What to drive and at which points."""
+    """What to drive and at which points.
+
+    `expected_photocurrent_ratio` (photocurrent over emitter current) and `expected_capacitance_F` are roughly known beforehand, or
+    `None`; nothing but the outlook on the plan uses them.
+    """
 
     device: DeviceSpec
     ratings: Ratings
@@ -126,6 +149,8 @@ class Plan:
     title: str = ""
     dark: DarkPlan | None = None
     fixture_file: str | None = None
+    expected_photocurrent_ratio: float | None = None
+    expected_capacitance_F: float | None = None
     source: str = field(default="", compare=False)
 
     def points(self) -> Iterator[Point]:
@@ -143,3 +168,46 @@ class Plan:
                 pulse_width_s=width,
                 repeat=repeat,
             )
+
+    @property
+    def has_transistor(self) -> bool:
+        """Whether the output is that of a transistor, so that the bias is its collector supply."""
+        return self.device.output_connection is not OutputConnection.LOAD_TO_GROUND
+
+    @property
+    def bias_rating_V(self) -> float:
+        """The rating that no bias may exceed; a plan that exists states it."""
+        ratings = self.ratings
+        rating = ratings.collector_emitter_V if self.has_transistor else ratings.reverse_bias_V
+        assert rating is not None  # a plan without it is refused
+        return rating
+
+    def steps(self) -> tuple[Step, ...]:
+        """Everything that the sweep takes, in order: the pulse points, then the dark traces with offset traces between.
+
+        Offset traces at zero bias stand before, between and after the dark traces, with the same load.
+        """
+        steps = [
+            Step(
+                number=number,
+                kind=Kind.PULSE,
+                load_ohm=point.load_ohm,
+                bias_V=point.bias_V,
+                element=point.element,
+                emitter_current_A=point.emitter_current_A,
+                pulse_width_s=point.pulse_width_s,
+                repeat=point.repeat,
+            )
+            for number, point in enumerate(self.points(), start=1)
+        ]
+        if self.dark is None:
+            return tuple(steps)
+        series = [(Kind.OFFSET, 0.0)]
+        for bias in self.dark.bias_V:
+            series += [(Kind.DARK, bias), (Kind.OFFSET, 0.0)]
+        element = 1 if self.device.elements == 1 else None
+        steps += [
+            Step(number=number, kind=kind, load_ohm=self.dark.load_ohm, bias_V=bias, element=element)
+            for number, (kind, bias) in enumerate(series, start=len(steps) + 1)
+        ]
+        return tuple(steps)

@@ -30,6 +30,7 @@ class Unit:
 
 _UNITS = (
     Unit(suffix="_A_per_W", symbol="A/W", spellings=("A/W",)),
+    Unit(suffix="_V_per_s", symbol="V/s", spellings=("V/s",)),
     Unit(suffix="_ratio", symbol="", spellings=("%",), prefixed=False),
     Unit(suffix="_degC", symbol="°C", spellings=("degC", "°C"), prefixed=False),
     Unit(suffix="_days", symbol="d", spellings=("d", "days"), prefixed=False),

@@ -8,7 +8,7 @@ from typing import Annotated
 
 import typer
 
-from darkedge.cli import choose, fit, measure, report, screen
+from darkedge.cli import bench, choose, fit, measure, plan, rehearse, report, screen, sweep
 
 app = typer.Typer(
     name="darkedge",
@@ -21,6 +21,20 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
 )
+app.command("rehearse", short_help="The whole job on invented parts, start to finish.")(rehearse.rehearse)
+app.add_typer(
+    plan.app,
+    name="plan",
+    short_help="Write a plan; hold one against ratings and instruments.",
+    help="Write a plan, and hold one against ratings and instruments.",
+)
+app.add_typer(
+    bench.app,
+    name="bench",
+    short_help="What answers; self-check; virtual instruments.",
+    help="What answers, self-check, and virtual instruments on loopback.",
+)
+app.command("sweep", short_help="Carry out a plan on a device.")(sweep.sweep)
 app.command("measure", short_help="Captures into the measurement table.")(measure.measure)
 app.command("fit", short_help="Junction capacitance, shortest pulse, dark current.")(fit.fit)
 app.command("choose", short_help="Bias and load for a wanted pulse.")(choose.choose)

@@ -22,6 +22,8 @@ class _Oscilloscope(Checked):
     dialect: str = "scpi-1999"
     channels: dict[str, int]
     probe_ratio: dict[str, float | int] = Field(default_factory=dict)
+    points: int = Field(default=2000, ge=100, le=10_000_000)
+    averages: int = Field(default=16, ge=1, le=65_536)
 
     @model_validator(mode="after")
     def _wired(self) -> _Oscilloscope:
@@ -42,6 +44,7 @@ class _Generator(Checked):
     address: str = Field(min_length=1)
     dialect: str = "scpi-1999"
     emitter_channels: list[int] = Field(default_factory=lambda: [1], min_length=1)
+    source_ohm: Positive = 50.0
 
 
 class _Bias(Checked):
@@ -52,6 +55,7 @@ class _Bias(Checked):
     source_ohm: NotNegative = 0.0
     decoupling_F: NotNegative = 0.0
     compliance_A: Positive | None = None
+    ramp_V_per_s: Positive = 20.0
 
     @model_validator(mode="after")
     def _complete(self) -> _Bias:
@@ -102,9 +106,14 @@ def read_bench(path: Path) -> Bench:
             dialect=scope.dialect,
             channels=dict(scope.channels),
             probe_ratio={name: float(ratio) for name, ratio in scope.probe_ratio.items()},
+            points=scope.points,
+            averages=scope.averages,
         ),
         function_generator=GeneratorLink(
-            address=generator.address, dialect=generator.dialect, emitter_channels=tuple(generator.emitter_channels)
+            address=generator.address,
+            dialect=generator.dialect,
+            emitter_channels=tuple(generator.emitter_channels),
+            source_ohm=generator.source_ohm,
         ),
         bias=BiasLink(
             source=BiasSource(bias.source),
@@ -114,6 +123,7 @@ def read_bench(path: Path) -> Bench:
             source_ohm=bias.source_ohm,
             decoupling_F=bias.decoupling_F,
             compliance_A=bias.compliance_A,
+            ramp_V_per_s=bias.ramp_V_per_s,
         ),
         switch=None
         if switch is None

@@ -21,6 +21,7 @@ from darkedge.analysis.files.tables import is_table, read_table
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.measuring import measure_captures, refused_measurement
+from darkedge.analysis.plan import Plan
 from darkedge.analysis.waveform.measure import measure_pulse_capture
 
 Progress = Callable[[int, int], None]
@@ -193,6 +194,19 @@ class _Reading:
             conditions=joined,
             remarks=capture.remarks,
         )
+
+
+def fixture_of(plan: Plan) -> Fixture:
+    """The fixture that a plan names, read from beside the plan; the unknown one where it names none.
+
+    Raises
+    ------
+    FixtureError
+        It is not there, or wrong.
+    """
+    if plan.fixture_file is None:
+        return UNKNOWN_FIXTURE
+    return read_fixture(Path(plan.source).parent / plan.fixture_file, edge_time=_edge_time)
 
 
 def _edge_time(path: Path, quantity: str) -> Estimate | None:

@@ -128,6 +128,11 @@ class _Dark(Checked):
     duration_s: Positive
 
 
+class _Expected(Checked):
+    photocurrent_ratio: Positive | None = None
+    capacitance_F: Positive | None = None
+
+
 class _FixtureLink(Checked):
     file: str
 
@@ -142,6 +147,7 @@ class _Plan(Checked):
     drive: _Drive
     dark: _Dark | None = None
     fixture: _FixtureLink | None = None
+    expected: _Expected = Field(default_factory=_Expected)
 
 
 def read_plan(path: Path) -> Plan:
@@ -193,6 +199,8 @@ def _plan(stated: _Plan, path: Path) -> Plan:
         drive=Drive(**stated.drive.model_dump()),
         dark=None if stated.dark is None else DarkPlan(**stated.dark.model_dump()),
         fixture_file=None if stated.fixture is None else stated.fixture.file,
+        expected_photocurrent_ratio=stated.expected.photocurrent_ratio,
+        expected_capacitance_F=stated.expected.capacitance_F,
         source=str(path),
     )
 
@@ -215,6 +223,8 @@ def _drive_faults(stated: _Plan) -> list[str]:
     ]
     if len(axes.load_ohm) > 1 and axes.load_change == "fixed":
         faults.append('axes.load_change: "fixed" with more than one load; wanted "ask" or "switched"')
+    elif stated.dark is not None and axes.load_change == "fixed" and stated.dark.load_ohm not in axes.load_ohm:
+        faults.append('axes.load_change: "fixed", and dark.load_ohm is another load; wanted "ask" or "switched"')
     return faults
 
 
@@ -223,7 +233,7 @@ def _rating_faults(plan: Plan) -> list[str]:
 
 
 def _bias_faults(plan: Plan) -> list[str]:
-    ratings, transistor = plan.ratings, _has_transistor(plan)
+    ratings, transistor = plan.ratings, plan.has_transistor
     key = "collector_emitter_V" if transistor else "reverse_bias_V"
     rating = ratings.collector_emitter_V if transistor else ratings.reverse_bias_V
     faults = [] if rating is not None else [f"ratings.{key}: missing; the plan sets a bias"]
@@ -274,7 +284,7 @@ def _emitter_faults(plan: Plan) -> list[str]:
 
 def _transistor_faults(plan: Plan) -> list[str]:
     ratings = plan.ratings
-    if not _has_transistor(plan) or ratings.collector_current_A is None:
+    if not plan.has_transistor or ratings.collector_current_A is None:
         return []
     worst = max(plan.axes.bias_V) / min(plan.axes.load_ohm)
     if worst <= ratings.collector_current_A:
@@ -285,7 +295,3 @@ def _transistor_faults(plan: Plan) -> list[str]:
             f"{ratings.collector_current_A:g} A. Raise the load or lower the supply"
         )
     ]
-
-
-def _has_transistor(plan: Plan) -> bool:
-    return plan.device.output_connection is not OutputConnection.LOAD_TO_GROUND

@@ -14,6 +14,8 @@ from darkedge.analysis.fixture import Fixture
 from darkedge.analysis.plan import Plan
 
 PLAN_NAME = "plan.toml"
+FIXTURE_COPY = "fixture.toml"
+"""The fixture as it was when the run was made, beside the plan."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -27,7 +29,7 @@ class RunContext:
 
 
 def read_run_context(folder: Path, *, edge_time: EdgeTime) -> RunContext:
-    """Read what stands in and above a run folder.
+    """Read what stands in and above a run folder. A fixture kept in the run goes before the one that the plan points at.
 
     Raises
     ------
@@ -39,7 +41,9 @@ def read_run_context(folder: Path, *, edge_time: EdgeTime) -> RunContext:
     lot = read_lot(lot_file) if lot_file.is_file() else None
     fixture = None
     if plan is not None and plan.fixture_file is not None:
-        path = folder / plan.fixture_file
+        path = folder / FIXTURE_COPY
+        if not path.is_file():
+            path = folder / plan.fixture_file
         if not path.is_file():
             raise InputError(
                 "the plan names a fixture file that is not there",

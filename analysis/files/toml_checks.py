@@ -107,12 +107,19 @@ def check(table: Mapping[str, object], model: type[M], *, where: str, word: str,
             found="" if stated is None else repr(stated),
             wanted=f'format = "{word}" on the first line',
         )
-    try:
-        return model.model_validate(dict(table))
-    except ValidationError as error:
-        faults = [_words(entry, model) for entry in error.errors(include_url=False)]
+    held, faults = hold(table, model)
+    if held is not None:
+        return held
     what = faults[0] if len(faults) == 1 else f"{len(faults)} faults\n  " + "\n  ".join(faults)
     raise error_class(what, where=where)
+
+
+def hold(table: Mapping[str, object], model: type[M]) -> tuple[M | None, list[str]]:
+    """Hold a part of a file against a model: the model, or every fault in words with its address in the part."""
+    try:
+        return model.model_validate(dict(table)), []
+    except ValidationError as error:
+        return None, [_words(entry, model) for entry in error.errors(include_url=False)]
 
 
 def _words(entry: Any, model: type[BaseModel]) -> str:  # noqa: ANN401 - pydantic's own typed dict, private

@@ -11,7 +11,7 @@ from darkedge.analysis.cautions import Caution, Setting, cautions_for
 from darkedge.analysis.decide.results import Limits, Screening, Verdict
 from darkedge.analysis.decide.verdicts import screen
 from darkedge.analysis.errors import DarkedgeError
-from darkedge.analysis.explain import explain_devices
+from darkedge.analysis.explain import Explained, explain_devices
 from darkedge.analysis.files.atomic import write_atomic
 from darkedge.analysis.files.intake import Intake
 from darkedge.analysis.fixture import Fixture
@@ -31,7 +31,13 @@ _DRAWN = (Kind.PULSE, Kind.DARK, None)
 
 
 def build_report(
-    intake: Intake, *, paths: Sequence[Path], made: str, limits: Limits | None = None, limits_source: str = ""
+    intake: Intake,
+    *,
+    paths: Sequence[Path],
+    made: str,
+    limits: Limits | None = None,
+    limits_source: str = "",
+    explained: Explained | None = None,
 ) -> ReportContent:
     """Fit, screen and draw what an intake holds.
 
@@ -41,8 +47,10 @@ def build_report(
     ----------
     made : str
         When the page was made, as text.
+    explained : Explained, optional
+        The fits, where they were made already.
     """
-    explained = explain_devices(intake.measurements, fixture_for=intake.fixture_for)
+    explained = explained or explain_devices(intake.measurements, fixture_for=intake.fixture_for)
     screening = None if limits is None else screen(_of_lots(intake.measurements), limits)
     chosen, left_out = _waveforms(intake, screening)
     tried = [e for e in explained.errors if not _is_lot_device(str(e.where), intake)]

@@ -149,6 +149,7 @@ class ScpiInstrument:
             self.add(pattern, handler)
         self._add_register("OPERation", self.status.operation)
         self._add_register("QUEStionable", self.status.questionable)
+        self._common = len(self._commands)
 
     def _add_register(self, name: str, register: EventRegister) -> None:
         def set_enable(call: Call) -> Reply:
@@ -166,6 +167,10 @@ class ScpiInstrument:
     def add(self, pattern: str, handler: Handler) -> None:
         """Add a command or query by its pattern."""
         self._commands.append(Command(pattern=parse_pattern(pattern), handler=handler))
+
+    def forget_own_commands(self) -> None:
+        """Keep the commands that every instrument has, for a subclass that says the rest in other words."""
+        del self._commands[self._common :]
 
     def reset(self) -> None:
         """Take the defined state of `*RST`."""

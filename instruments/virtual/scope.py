@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.signal import lfilter
 
 from darkedge.instruments.virtual.errors import ScpiError
 from darkedge.instruments.virtual.front_end import CODES, FrontEnd, limit_bandwidth, to_codes
@@ -28,7 +29,7 @@ OVERSAMPLING = 4
 _STEPS_V = tuple(m * 10.0**e for e in range(-3, 2) for m in (0.8, 1.6, 4.0))
 
 
-def _hardware_range(value: float) -> float:
+def hardware_range(value: float) -> float:
     """The next range the hardware has: 1, 2, 5 steps a division over eight divisions."""
     return next((step for step in _STEPS_V if step >= value * (1 - 1e-9)), _STEPS_V[-1])
 
@@ -73,7 +74,7 @@ class Flaws:
     input_bias_A: float = 2e-10
 
 
-_RANGE = Range(low=8e-3, high=40.0, default=8.0, unit="V", round_to=_hardware_range)
+_RANGE = Range(low=8e-3, high=40.0, default=8.0, unit="V", round_to=hardware_range)
 _OFFSET = Range(low=-40, high=40, default=0, unit="V")
 _SPAN = Range(low=20e-9, high=10.0, default=1e-3, unit="S")
 _START = Range(low=-10, high=10, default=0, unit="S")
@@ -218,8 +219,12 @@ class Oscilloscope(ScpiInstrument):
         start = self._trigger_time()
         self._waiting = start is None
         if start is not None:
-            self._record = {index: self._capture(index, start) for index in range(CHANNELS)}
+            self._record = {index: self._capture(index, start) for index in self._used()}
         return None
+
+    def _used(self) -> range:
+        """Channels that something is wired to; the others show nothing but their own noise, made when asked for."""
+        return range(1 + len(self.world.device.elements))
 
     def _trigger_time(self) -> float | None:
         """When the trigger fires, time from the start of a pulse; `None` where it never does."""
@@ -296,16 +301,17 @@ class Oscilloscope(ScpiInstrument):
         white = self._random.normal(0.0, 1.0, (shots, size + lead))
         keep = float(np.exp(-2 * np.pi * front.bandwidth_Hz * dt_s))
         if keep > 1e-3:
-            white = np.stack([limit_bandwidth(row, dt_s, front.bandwidth_Hz) for row in white])
-            white *= np.sqrt((1 + keep) / (1 - keep))
+            white = lfilter([1 - keep], [1, -keep], white, axis=1) * np.sqrt((1 + keep) / (1 - keep))
         noise: FloatArray = white[:, lead:] * front.noise_ratio * front.range_V
         return noise
 
     def _trace(self, call: Call) -> Reply:
         name = read_choice(call.only(), tuple(f"CH{k}" for k in range(1, CHANNELS + 1)))
         index = int(name[2:]) - 1
-        if index not in self._record:
+        if not self._record:
             raise ScpiError(-230, "nothing acquired")
+        if index not in self._record:
+            self._record[index] = self._capture(index, 0.0)
         values = self._record[index]
         if self.format == "ASC":
             return ",".join(f"{value:.7E}" for value in values)

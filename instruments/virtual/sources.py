@@ -6,11 +6,11 @@ from darkedge.instruments.virtual.errors import ScpiError
 from darkedge.instruments.virtual.instrument import Call, Range, Reply, ScpiInstrument, read_boolean, read_choice
 from darkedge.instruments.virtual.wiring import Drive, Rail, World
 
-_LEVEL = Range(low=-10, high=10, default=0, unit="V", round_to=lambda x: round(x, 3))
+_LEVEL = Range(low=-20, high=20, default=0, unit="V", round_to=lambda x: round(x, 3))
 _WIDTH = Range(low=20e-9, high=1.0, default=1e-4, unit="S")
 _PERIOD = Range(low=100e-9, high=10.0, default=1e-3, unit="S")
 _STATED_LOAD = Range(low=1, high=9.9e37, default=50, unit="OHM")
-_BIAS = Range(low=0, high=60, default=0, unit="V", round_to=lambda x: round(x * 2000) / 2000)
+_BIAS = Range(low=0, high=120, default=0, unit="V", round_to=lambda x: round(x * 2000) / 2000)
 _COMPLIANCE = Range(low=1e-6, high=0.5, default=0.1, unit="A")
 
 
@@ -36,6 +36,7 @@ class FunctionGenerator(ScpiInstrument):
         number("OUTPut#:IMPedance", _STATED_LOAD, "load_ohm")
         self.add("OUTPut#[:STATe]", self._set_output)
         self.add("OUTPut#[:STATe]?", lambda call: str(int(self._drive(call).on)))
+        number("[SOURce#:]VOLTage[:LEVel][:IMMediate]:OFFSet", _LEVEL, "dc_V")
         self.add("[SOURce#:]FUNCtion[:SHAPe]", self._set_shape)
         self.add("[SOURce#:]FUNCtion[:SHAPe]?", self._shape)
 
@@ -61,14 +62,13 @@ class FunctionGenerator(ScpiInstrument):
         return None
 
     def _set_shape(self, call: Call) -> Reply:
-        self._drive(call)
-        read_choice(call.only(), ("PULSe",))  # the only shape it has
+        self._drive(call).shape = read_choice(call.only(), ("PULSe", "DC"))
+        self.world.note_extremes()
         return None
 
     def _shape(self, call: Call) -> Reply:
-        self._drive(call)
         call.none()
-        return "PULS"
+        return self._drive(call).shape
 
 
 class BiasSupply(ScpiInstrument):

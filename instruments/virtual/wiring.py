@@ -21,6 +21,8 @@ V = TypeVar("V")
 
 GENERATOR_OHM = 50.0
 GENERATOR_EDGE_s = 5e-9
+FORWARD_V = 0.6
+"""Drop of a junction that is the wrong way round."""
 LIGHT_V_per_A = 40.0
 """Reference detector: volts at the scope for each ampere in the emitter."""
 
@@ -35,19 +37,27 @@ class Drive:
     period_s: float = 1e-3
     load_ohm: float = 50.0
     on: bool = False
+    shape: str = "PULS"
+    dc_V: float = 0.0
+
+    @property
+    def pulsing(self) -> bool:
+        """Whether pulses come out."""
+        return self.on and self.shape == "PULS"
 
     def open_V(self, stated_V: float) -> float:
         """Open-circuit voltage behind 50 ohm that gives the stated level into the stated load."""
-        return stated_V * (self.load_ohm + GENERATOR_OHM) / self.load_ohm
+        return stated_V * (1 + GENERATOR_OHM / self.load_ohm)
 
 
 @dataclass(slots=True)
 class Rail:
-    """The bias supply as set: level, compliance, output."""
+    """The bias as set: level, compliance, output of the supply; `by_hand_V` where somebody turns a knob."""
 
     level_V: float = 0.0
     compliance_A: float = 0.1
     on: bool = False
+    by_hand_V: float = 0.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -81,6 +91,7 @@ class World:
     drives: list[Drive] = field(default_factory=lambda: [Drive(), Drive()])
     rail: Rail = field(default_factory=Rail)
     extremes: Extremes = field(default_factory=Extremes)
+    bias_from: str = "supply"
     scope_input_ohm: float = 1e6
     mains_Hz: float = 50.0
     light_leak_A: float = 0.0
@@ -99,7 +110,7 @@ class World:
         self.extremes.reverse_bias_V = max(self.extremes.reverse_bias_V, self.bias_V)
         for index in range(len(self.device.elements)):
             current, low_V = self.emitter_A(index), self.drives[index].open_V(self.drives[index].low_V)
-            if not self.drives[index].on:
+            if not self.drives[index].pulsing:
                 continue
             duty = self.drives[index].width_s / self.drives[index].period_s
             self.extremes.emitter_current_A = max(self.extremes.emitter_current_A, current)
@@ -108,13 +119,22 @@ class World:
 
     @property
     def bias_V(self) -> float:
-        """Voltage on the bias rail."""
-        return self.rail.level_V if self.rail.on else 0.0
+        """Voltage on the bias rail: as set, or as far down as the compliance pulls it where a device conducts."""
+        if self.bias_from == "hand":
+            return self.rail.by_hand_V
+        if self.bias_from == "generator":
+            drive = self.drives[1]
+            return drive.open_V(drive.dc_V) if drive.on and drive.shape == "DC" else 0.0
+        level = self.rail.level_V if self.rail.on else 0.0
+        conducting = sum(e.junction.reversed_in_socket and not e.transistors for e in self.device.elements)
+        if conducting == 0:
+            return level
+        return min(level, FORWARD_V + self.rail.compliance_A * self.wiring.load_ohm / conducting)
 
     def emitter_A(self, index: int) -> float:
         """Peak current of an emitter: open voltage less its forward drop, through 50 ohm and the series resistor."""
         drive = self.drives[index]
-        if not drive.on:
+        if not drive.pulsing:
             return 0.0
         emitter = self.device.elements[index].emitter
         return self._through(drive.open_V(drive.high_V), emitter)
@@ -125,17 +145,17 @@ class World:
     def drive_V(self, index: int, *, high: bool) -> float:
         """Voltage at the generator's terminal with the emitter connected."""
         drive = self.drives[index]
-        open_V = drive.open_V(drive.high_V if high else drive.low_V) if drive.on else 0.0
+        open_V = drive.open_V(drive.high_V if high else drive.low_V) if drive.pulsing else 0.0
         current = self._through(open_V, self.device.elements[index].emitter)
         return open_V - GENERATOR_OHM * current
 
     def period_s(self) -> float:
         """Period after which everything repeats: that of the first channel that is on."""
-        return next((drive.period_s for drive in self.drives if drive.on), 1e-3)
+        return next((drive.period_s for drive in self.drives if drive.pulsing), 1e-3)
 
     def drive_signal(self, time_s: FloatArray) -> FloatArray:
         """What the reference channel shows, time from the start of a pulse: the drive of the first channel that is on."""
-        index = next((k for k, drive in enumerate(self.drives[: len(self.device.elements)]) if drive.on), 0)
+        index = next((k for k, drive in enumerate(self.drives[: len(self.device.elements)]) if drive.pulsing), 0)
         drive = self.drives[index]
         if self.wiring.reference == "light":
             light = self._lit(index)
@@ -181,6 +201,8 @@ class World:
         for index, element in enumerate(self.device.elements):
             if element.transistors:
                 total += max(socket.bias_V - self.resting_V(index), 0.0) / socket.load_ohm
+            elif element.junction.reversed_in_socket:
+                total += max(socket.bias_V - FORWARD_V, 0.0) / socket.load_ohm
             else:
                 total += element.junction.dark_A(socket.bias_V, socket.temperature_degC)
         return total
