@@ -19,9 +19,12 @@ if TYPE_CHECKING:
     from darkedge.analysis.fixture import Fixture
     from darkedge.analysis.measurement import Measurement
     from darkedge.cli.listing import Listing
-    from darkedge.instruments.virtual.parts import Device
     from darkedge.instruments.virtual.lots import Fault
+    from darkedge.instruments.virtual.parts import Device
     from darkedge.instruments.virtual.rehearsal import Rehearsal
+
+
+AVERAGES = 8
 
 
 @guarded
@@ -146,7 +149,7 @@ def _sweep_lot(job: Rehearsal, folder: Path, lot: Path, words: str) -> list[tupl
         dialects = (
             dict.fromkeys(("oscilloscope", "function_generator", "bias"), OWN_WORDS_NAME) if words == "own" else {}
         )
-        write_atomic(folder / "bench.toml", virtual.bench_toml(dialects=dialects))
+        write_atomic(folder / "bench.toml", virtual.bench_toml(dialects=dialects, averages=AVERAGES))
         plan, bench = read_plan(folder / "plan.toml"), read_bench(folder / "bench.toml")
         found = outlook(plan, bench=bench, fixture=read_fixture(folder / "fixture.toml"))
         print_listing(outlook_listing(plan.title, found))

@@ -69,7 +69,7 @@ def screen(measurements: Sequence[Measurement], limits: Limits) -> Screening:
 
     A limit applies to the rows whose conditions are those under `when`: numbers within `tolerance_ratio`, words equal; a row that
     lacks the condition does not match, and offset and reference captures never do. Rows that match and agree in all other conditions
-    (temperature to about 5 K) are repeats: their mean is judged, with the larger of their uncertainty and that of their scatter. Rows that differ in
+    (temperature to about 5 K) are repeats; of several captures of one point the one that tells the quantity best stands for it: their mean is judged, with the larger of their uncertainty and that of their scatter. Rows that differ in
     conditions which the limit leaves open, and rows that name no device (they may be of several), are judged each, and the
     worst counts. No matching row leaves the limit undecided, in words; so does a quantity that could not be had. A refused
     file keeps the whole from passing.
@@ -198,6 +198,7 @@ def _shows(row: Measurement, quantity: str) -> bool:
 
 
 def _judge_repeats(repeats: Sequence[Measurement], limit: Limit, limits: Limits) -> LimitVerdict:
+    repeats = _best_of_each_point(repeats, limit.quantity)
     captures = tuple(row.capture for row in repeats)
     estimate = _mean(repeats, limit.quantity)
     if estimate is None:
@@ -213,6 +214,29 @@ def _judge_repeats(repeats: Sequence[Measurement], limit: Limit, limits: Limits)
         limit=limit, verdict=verdict, estimate=estimate, probability_conforming=probability, captures=captures,
         reason=_reason(verdict, estimate, probability, limit, limits),
     )  # fmt: skip
+
+
+def _best_of_each_point(rows: Sequence[Measurement], quantity: str) -> list[Measurement]:
+    """One row for each point of a run: where a point has captures of the whole pulse and of its edges, that which tells best.
+
+    A capture of one edge does not show the other one, and is no reason to call it missing. Captures that do not say their
+    point stand for themselves.
+    """
+    found: dict[tuple[object, ...], Measurement] = {}
+    for row in rows:
+        known = row.conditions
+        key: tuple[object, ...] = (_folder(row), known.run, known.point) if known.point is not None else (row.capture,)
+        if key not in found or _roughness(row, quantity) < _roughness(found[key], quantity):
+            found[key] = row
+    return list(found.values())
+
+
+def _roughness(row: Measurement, quantity: str) -> tuple[int, float]:
+    """Order of rows by how well they tell a quantity: a value by its uncertainty, then a bound, then nothing."""
+    estimate = row.quantities.get(quantity)
+    if estimate is None:
+        return 2, 0.0
+    return (1, 0.0) if estimate.u is None else (0, estimate.u)
 
 
 def _matches(row: Measurement, limit: Limit) -> bool:

@@ -51,5 +51,8 @@ def _drawn(figure: Figure, **how: object) -> bytes:
     stream = io.BytesIO()
     with look(), warnings.catch_warnings():
         warnings.filterwarnings("ignore", message="Glyph .* missing from")
+        # Laid out once and then held: saving would work the layout out twice, which is half of the time.
+        figure.draw_without_rendering()
+        figure.set_layout_engine("none")
         figure.savefig(stream, **how)  # type: ignore[arg-type]
     return stream.getvalue()

@@ -101,8 +101,8 @@ def _measure_element(
         flags.add("uneven_time")
     if channel is None:
         return Measurement(
-            capture=capture.name, element=element, conditions=conditions, flags=(*flags, "no_pulse"), levels=LEVELS,
-            n_pulses=0,
+            capture=capture.name, element=element, conditions=conditions, quantities=_hidden_amplitude(record, drive),
+            flags=(*flags, "no_pulse"), levels=LEVELS, n_pulses=0,
         )  # fmt: skip
     pairing = _pairing(drive, channel, fixture)
     job = _Job(
@@ -115,6 +115,17 @@ def _measure_element(
         capture=capture.name, element=element, conditions=conditions, quantities=quantities, flags=tuple(flags),
         levels=LEVELS, estimator=job.estimator(), n_pulses=job.n_pulses(),
     )  # fmt: skip
+
+
+def _hidden_amplitude(record: Record, drive: Channel | None) -> dict[str, Estimate]:
+    """How large a pulse can be that was not seen: no larger than all that the trace moves, where the drive did pulse.
+
+    A trace that never moves by a code may be clipped or not connected, and bounds nothing.
+    """
+    moved = float(np.ptp(record.signal_V))
+    if drive is None or drive.transitions.rising.size == 0 or moved <= 0:
+        return {}
+    return {"amplitude_V": Estimate(hi95=moved)}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -117,7 +117,7 @@ def _spread(element: Element, random: np.random.Generator) -> Element:
 def _slow(element: Element) -> Element:
     """Too much capacitance, or, behind a transistor, too much stored charge."""
     junction = replace(element.junction, c_j0_F=1.5 * element.junction.c_j0_F)
-    transistors = tuple(replace(t, reverse_transit_s=2.2 * t.reverse_transit_s) for t in element.transistors)
+    transistors = tuple(replace(t, reverse_transit_s=3.0 * t.reverse_transit_s) for t in element.transistors)
     return replace(element, junction=junction, transistors=transistors)
 
 

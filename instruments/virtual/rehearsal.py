@@ -48,7 +48,7 @@ class _Job:
 
 _DIODE_AXES = """load_ohm = ["1 kohm", "10 kohm"]
 load_change = "ask"
-bias_V = [1, 2, 4, 7, 12, 20]
+bias_V = [1, 2.5, 6, 12, 20]
 emitter_current_A = "5 mA"
 pulse_width_s = ["1 us", "10 us"]
 repeats = 1
@@ -102,9 +102,9 @@ _JOBS: Mapping[PartKind, _Job] = {
     PartKind.PIN: _Job(
         axes=_DIODE_AXES, dark=_DIODE_DARK, limits=_diode_limits("86 ns"), pulse_width="2 us", rails="5 V, 12 V"
     ),
-    PartKind.TRANSISTOR_SWITCH: _switch_job("12 us"),
+    PartKind.TRANSISTOR_SWITCH: _switch_job("13 us"),
     PartKind.OPTOCOUPLER: _switch_job("19 us"),
-    PartKind.DUAL_OPTOCOUPLER: _switch_job("19 us"),
+    PartKind.DUAL_OPTOCOUPLER: _switch_job("17 us"),
 }
 
 
