@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 import pyvisa
 from pyvisa.constants import StatusCode
+from pyvisa.errors import Error as VisaError
 from pyvisa.errors import LibraryError, VisaIOError
 from pyvisa.resources import MessageBasedResource
 
@@ -71,7 +72,7 @@ def list_resources(visa: str) -> Found:
     except (VisaIOError, OSError, ValueError) as error:
         return Found(resources=(), trouble=_first_line(error))
     finally:
-        with contextlib.suppress(VisaIOError, OSError):
+        with contextlib.suppress(VisaError, OSError):
             manager.close()
 
 
@@ -100,17 +101,25 @@ class VisaTransport:
                 write_termination=self._line_end,
             )
         except Exception as error:
-            raise LinkError(
-                "the instrument cannot be reached",
-                where=self.address,
-                found=_first_line(error),
-                mend="check power, cable and address; darkedge bench list shows what can be found",
-            ) from error
+            raise self._unreachable(error) from error
         if not isinstance(resource, MessageBasedResource):
             raise LinkError("not an instrument that takes messages", where=self.address)
         resource.chunk_size = _CHUNK_BYTES
-        _send_at_once(self._manager, resource)
+        if (wire := _socket_of(self._manager, resource)) is not None:
+            try:
+                _ready(wire)
+            except OSError as error:
+                resource.close()
+                raise self._unreachable(error) from error
         self._resource = resource
+
+    def _unreachable(self, error: Exception) -> LinkError:
+        return LinkError(
+            "the instrument cannot be reached",
+            where=self.address,
+            found=_first_line(error),
+            mend="check power, cable and address; darkedge bench list --bench FILE shows who answers",
+        )
 
     def write(self, message: str) -> None:
         """Send one message."""
@@ -135,12 +144,12 @@ class VisaTransport:
     def close(self) -> None:
         """Close link and library session."""
         self._shut()
-        with contextlib.suppress(VisaIOError, OSError):
+        with contextlib.suppress(VisaError, OSError):
             self._manager.close()
 
     def _shut(self) -> None:
         if self._resource is not None:
-            with contextlib.suppress(VisaIOError, OSError):
+            with contextlib.suppress(VisaError, OSError):
                 self._resource.close()
         self._resource = None
 
@@ -170,22 +179,32 @@ class VisaTransport:
                 wanted="a block with its length, or plain text",
                 mend="check the waveform query of the dialect",
             ) from error
-        except OSError as error:
+        except (VisaError, OSError) as error:
             raise LinkError(
                 "the connection is gone", where=self.address, found=f"{message!r}, then {_first_line(error)}"
             ) from error
 
 
-def _send_at_once(manager: ResourceManager, resource: MessageBasedResource) -> None:
-    """Switch off Nagle's delay, which costs 40 ms where two messages follow each other and a query follows them.
-
-    pyvisa-py's own way to set it on a raw socket raises (as of 0.8.1), so it is set on the socket; other libraries look after it.
-    """
+def _socket_of(manager: ResourceManager, resource: MessageBasedResource) -> socket.socket | None:
+    """The raw socket behind a resource of pyvisa-py; `None` for other links and libraries, which look after theirs."""
     sessions = getattr(manager.visalib, "sessions", {})
     interface = getattr(sessions.get(resource.session), "interface", None)
-    if isinstance(interface, socket.socket):
-        with contextlib.suppress(OSError):
-            interface.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+    return interface if isinstance(interface, socket.socket) else None
+
+
+def _ready(wire: socket.socket) -> None:
+    """Make sure that somebody is at the other end, and send messages at once.
+
+    pyvisa-py (as of 0.8.1) opens a raw socket without noticing a refusal. Nagle's delay costs 40 ms where two messages follow each
+    other and a query follows them; pyvisa-py's own way to switch it off raises.
+
+    Raises
+    ------
+    OSError
+        Nobody is there.
+    """
+    wire.getpeername()
+    wire.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
 
 
 def _first_line(error: BaseException) -> str:

@@ -14,6 +14,7 @@ from darkedge.analysis.plan import Plan
 from darkedge.instruments.live_bench import LiveBench, OpenLink, Time, open_bench, open_visa
 from darkedge.instruments.running import Course, Ran, run_plan
 from darkedge.instruments.taking import Naming
+from darkedge.instruments.virtual.instrument import Handler, ScpiInstrument
 from darkedge.instruments.virtual.lots import CATALOGUE, Fault, PartKind, make_device
 from darkedge.instruments.virtual.rehearsal import FLAWS, OWN_WORDS, OWN_WORDS_NAME, STRAY_F, VirtualHands, VirtualTime
 from darkedge.instruments.virtual.serving import VirtualBench, actual_ohm
@@ -54,6 +55,12 @@ def plan_text(
     *, loads: str = '["1 kohm"]', change: str = "ask", biases: str = "[5]", widths: str = '["1 us"]', dark: str = ""
 ) -> str:
     return PLAN.format(loads=loads, change=change, biases=biases, widths=widths, dark=dark)
+
+
+def override(instrument: ScpiInstrument, pattern: str, handler: Handler) -> None:
+    """Let a command of an instrument do something else, as a faulty one would."""
+    instrument.add(pattern, handler)
+    instrument._commands.insert(0, instrument._commands.pop())
 
 
 @dataclass

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import socket
 import socketserver
 import threading
@@ -19,6 +20,13 @@ class _Handler(socketserver.StreamRequestHandler):
 
     def handle(self) -> None:
         self.request.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+        self.server.clients.add(self.request)
+        try:
+            self._converse()
+        finally:
+            self.server.clients.discard(self.request)
+
+    def _converse(self) -> None:
         while True:
             try:
                 line = self.rfile.readline(LINE_LIMIT)
@@ -52,6 +60,7 @@ class _Server(socketserver.ThreadingTCPServer):
     def __init__(self, instrument: ScpiInstrument, port: int) -> None:
         self.instrument = instrument
         self.turn = threading.Lock()
+        self.clients: set[socket.socket] = set()
         super().__init__(("127.0.0.1", port), _Handler)
 
 
@@ -78,8 +87,11 @@ class InstrumentServer:
         return f"TCPIP::127.0.0.1::{self.port}::SOCKET"
 
     def close(self) -> None:
-        """Stop serving."""
+        """Stop serving, and drop whoever is connected."""
         self._server.shutdown()
+        for client in tuple(self._server.clients):
+            with contextlib.suppress(OSError):
+                client.shutdown(socket.SHUT_RDWR)
         self._server.server_close()
         self._thread.join(timeout=2)
 
