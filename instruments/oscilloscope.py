@@ -19,7 +19,7 @@ HIGH_INPUT_OHM = 1e6
 ANSWER_MARGIN_s = 5.0
 _POLL_s = 0.02
 _SAME_RATIO = 0.02
-OTHER_TRIES = (1.0, 2.5, 6.5, 16.0, 40.0, 0.4, 0.1)
+OTHER_TRIES = (*(1.25**k for k in range(18)), 0.4, 0.1)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -161,7 +161,11 @@ class VisaTransport:
             raise LinkError("the link is closed", where=self.address)
         try:
             resource.timeout = (ANSWER_LIMIT_s if limit_s is None else limit_s) * 1e3
-            yield resource
+            with warnings.catch_warnings():  # an answer without its line end is read all the same
+                warnings.filterwarnings(
+                    "ignore", message="read string doesn't end with termination", category=UserWarning
+                )
+                yield resource
         except VisaIOError as error:
             late = error.error_code == StatusCode.error_timeout
             what = "no answer in time, or a part of one" if late else "the link failed"
