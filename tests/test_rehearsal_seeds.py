@@ -12,7 +12,7 @@ from darkedge.analysis.explain import explain_devices
 from darkedge.analysis.files.intake import take_in
 from darkedge.instruments.virtual.lots import Fault, PartKind
 from darkedge.instruments.virtual.parts import Device
-from darkedge.instruments.virtual.rehearsal import TEMPERATURE_degC, Rehearsal, VirtualHands
+from darkedge.instruments.virtual.rehearsal import Rehearsal, TEMPERATURE_degC, VirtualHands
 
 PARAMETERS = ("c_j0_F", "v_bi_V", "grading", "full_depletion_V")
 

@@ -283,15 +283,21 @@ def _emitter_faults(plan: Plan) -> list[str]:
 
 
 def _transistor_faults(plan: Plan) -> list[str]:
+    """What the switch carries at worst: the whole supply across the load, and half of it across the transistor."""
     ratings = plan.ratings
-    if not plan.has_transistor or ratings.collector_current_A is None:
+    if not plan.has_transistor:
         return []
-    worst = max(plan.axes.bias_V) / min(plan.axes.load_ohm)
-    if worst <= ratings.collector_current_A:
-        return []
-    return [
-        (
-            f"axes.load_ohm: the switch would carry more than ratings.collector_current_A; found {worst:g} A, wanted at most "
-            f"{ratings.collector_current_A:g} A. Raise the load or lower the supply"
-        )
-    ]
+    steps = plan.steps()
+    current = max(step.bias_V / step.load_ohm for step in steps)
+    power = max(step.bias_V**2 / (4 * step.load_ohm) for step in steps)
+    faults = []
+    for what, found, key, rating, unit in (
+        ("the switch would carry", current, "collector_current_A", ratings.collector_current_A, "A"),
+        ("the switch would turn into heat", power, "dissipation_W", ratings.dissipation_W, "W"),
+    ):
+        if rating is not None and found > rating:
+            faults.append(
+                f"axes.load_ohm: {what} more than ratings.{key}; found {found:.3g} {unit}, wanted at most {rating:g} {unit}. "
+                "Raise the load or lower the supply"
+            )
+    return faults

@@ -256,7 +256,8 @@ class Oscilloscope(ScpiInstrument):
         clean = limit_bandwidth(self._shown(index, time), dt, front.bandwidth_Hz)[lead:]
         shifts = self._random.normal(0.0, self.flaws.jitter_s, shots)
         slope = np.gradient(clean, dt)
-        noise = self._noise(shots, clean.size, dt, front)
+        rms_V = float(np.hypot(front.noise_ratio * front.range_V, self._part_noise_V(index)))
+        noise = self._noise(shots, clean.size, dt, front.bandwidth_Hz) * rms_V
         shown = (clean + shifts[:, None] * slope + noise)[:, ::OVERSAMPLING]
         record: FloatArray = to_codes(shown + front.zero_error_V, front).mean(axis=0)
         return record
@@ -271,17 +272,17 @@ class Oscilloscope(ScpiInstrument):
             if self.world.light_leak_A:
                 phase = 2 * np.pi * 2 * self.world.mains_Hz * time_s
                 signal = signal + self.world.light_leak_A * across * (1 + np.cos(phase)) / 2
-            signal = signal + self._extra_noise(index - 1, time_s.size, across)
         if channel.coupling == "AC":
             signal = signal - signal.mean()
         return signal
 
-    def _extra_noise(self, element: int, size: int, across_ohm: float) -> FloatArray:
-        """Noise current of a bad part."""
-        if element >= len(self.world.device.elements):
-            return np.zeros(size)
-        noise_A = self.world.device.elements[element].junction.noise_A
-        return self._random.normal(0.0, 1.0, size) * noise_A * across_ohm
+    def _part_noise_V(self, index: int) -> float:
+        """Rms noise voltage of a bad part across the load, as the scope's input sees it."""
+        element = index - 1
+        if not 0 <= element < len(self.world.device.elements) or self.world.wiring.connection == "pull_up":
+            return 0.0
+        load, own = self.world.wiring.load_ohm, self.channels[index].impedance_ohm
+        return self.world.device.elements[element].junction.noise_A * load * own / (load + own)
 
     def _front_end(self, index: int) -> FrontEnd:
         channel = self.channels[index]
@@ -295,14 +296,14 @@ class Oscilloscope(ScpiInstrument):
             skew_s=self.flaws.skew_s[index],
         )
 
-    def _noise(self, shots: int, size: int, dt_s: float, front: FrontEnd) -> FloatArray:
-        """Noise of a stated rms after the bandwidth limit, whatever the sample step."""
+    def _noise(self, shots: int, size: int, dt_s: float, bandwidth_Hz: float) -> FloatArray:
+        """Noise of unit rms after the bandwidth limit, whatever the sample step; shape (shots, size)."""
         lead = 64
         white = self._random.normal(0.0, 1.0, (shots, size + lead))
-        keep = float(np.exp(-2 * np.pi * front.bandwidth_Hz * dt_s))
+        keep = float(np.exp(-2 * np.pi * bandwidth_Hz * dt_s))
         if keep > 1e-3:
             white = lfilter([1 - keep], [1, -keep], white, axis=1) * np.sqrt((1 + keep) / (1 - keep))
-        noise: FloatArray = white[:, lead:] * front.noise_ratio * front.range_V
+        noise: FloatArray = white[:, lead:]
         return noise
 
     def _trace(self, call: Call) -> Reply:
