@@ -77,10 +77,14 @@ def test_few_samples_on_edge() -> None:
     assert "few_samples_on_edge" in measured(pulse(tau=1e-9) + hiss()).flags
 
 
-def test_no_pulse_has_no_quantities() -> None:
+def test_no_pulse_has_no_quantities_but_a_bound_of_the_amplitude_where_the_drive_did_pulse() -> None:
     found = measured(hiss())
     assert "no_pulse" in found.flags
-    assert found.quantities == {}
+    assert found.quantities.keys() == {"amplitude_V"}
+    assert found.quantities["amplitude_V"].value is None
+    assert found.quantities["amplitude_V"].hi95 == pytest.approx(np.ptp(hiss()))
+    assert measured(hiss(), drive=None).quantities == {}
+    assert measured(0 * hiss()).quantities == {}
     assert found.n_pulses == 0
 
 
