@@ -4,14 +4,26 @@ from __future__ import annotations
 
 import sys
 from importlib.metadata import version
-from typing import Annotated
+from typing import Annotated, Any
 
 import typer
+from typer.core import TyperGroup
 
 from darkedge.cli import bench, choose, fit, measure, plan, rehearse, report, screen, sweep
 
+
+class _InOrder(TyperGroup):
+    """Lists the commands in the order of the work."""
+
+    def list_commands(self, ctx: Any) -> list[str]:  # noqa: ANN401 - the library keeps its type private
+        """Names in order."""
+        order = ("rehearse", "bench", "plan", "sweep", "measure", "fit", "choose", "screen", "report")
+        return [*order, *(name for name in self.commands if name not in order)]
+
+
 app = typer.Typer(
     name="darkedge",
+    cls=_InOrder,
     help=(
         "Measure, explain, choose and screen fast light detectors: photodiodes, PINs, "
         "photodiode-plus-transistor switches, optocouplers."

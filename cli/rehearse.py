@@ -80,7 +80,7 @@ def rehearse(
         content = build_report(
             intake,
             paths=[lot],
-            made="rehearsal, invented parts",
+            made="in a rehearsal, on invented parts,",
             limits=limits,
             limits_source=str(folder / "limits.toml"),
             explained=explained,

@@ -115,7 +115,10 @@ def test_the_installed_package_is_marked_as_typed() -> None:
         assert (Path(spec.origin).parent / "py.typed").is_file()
 
 
-@pytest.mark.parametrize("library", ["numpy", "scipy", "pandas", "matplotlib", "typer"])
+@pytest.mark.parametrize(
+    "library",
+    ["numpy", "scipy", "pandas", "matplotlib", "typer", "pyvisa", "pydantic", "iminuit", "jinja2", "quantiphy", "rich"],
+)
 def test_shipped_code_uses_the_library_it_depends_on(library: str) -> None:
     assert any(name.split(".")[0] == library for path in MODULES.values() for name in imports_of(path))
 
