@@ -23,7 +23,6 @@ LOOKS_PER_POINT = 2.5
 SCOPE_INPUT_OHM = 1e6
 ASSUMED_CODE_V = 10e-3 / 256
 """One of 256 codes of a 10 mV range: what common bench scopes have at their finest (common practice, no source)."""
-RESOLVED_CODES = 3.0
 BENCH_RATIO = 2.0
 MAINS_s = (1 / 50, 1 / 60)
 
@@ -63,7 +62,8 @@ def outlook(
 
     Notes
     -----
-    The smallest dark current is three codes over the effective resistance: what a trace resolves before averaging helps. Edges are
+    The smallest dark current is one code over the effective resistance: averaging a trace goes below that only as far as its noise
+    moves it by codes. Edges are
     2.2 R C with the capacitance that is expected, one pole; the swing is the photocurrent that is expected times the effective load.
     """
     steps = plan.steps()
@@ -77,7 +77,7 @@ def outlook(
     smallest = None
     if plan.dark is not None:
         resistance = fixture.effective_load(plan.dark.load_ohm, SCOPE_INPUT_OHM).value or plan.dark.load_ohm
-        smallest = RESOLVED_CODES * (code_V or ASSUMED_CODE_V) / resistance
+        smallest = (code_V or ASSUMED_CODE_V) / resistance
         if code_V is None:
             notes.append(
                 "The smallest dark current is that of a 10 mV range with 256 codes; --bench asks the scope for its own."

@@ -52,7 +52,7 @@ def list_(
         rows += [[a.role.replace("_", " "), a.address, a.identity or f"no answer: {a.trouble}"] for a in answers]
         print_listing(Listing(title="", columns=["what", "address", "who answers"], rows=rows))
         if found.trouble:
-            say(f"note: {found.trouble}")
+            say(f"note: the VISA library says: {found.trouble}")
         say("note: raw sockets (TCPIP ... SOCKET) cannot be found by asking; they stand in the bench file.")
     return 3 if any(not answer.identity for answer in answers) else 0
 

@@ -217,6 +217,15 @@ def test_where_even_the_shortest_pulse_comes_through_only_a_bound_is_given() -> 
     assert (found.shortest_pulse_s.value, found.shortest_pulse_s.hi95) == (None, 6e-6)
 
 
+def test_a_closer_look_at_one_edge_does_not_count_as_a_pulse_that_was_lost() -> None:
+    """Captures of the edges of a pulse show no width; the capture of the whole pulse does."""
+    whole = widths(1e-6, [1e-6, 2e-6, 3e-6, 10e-6])
+    edge = replace(whole[-1], capture="edge", quantities={"amplitude_V": whole[-1].quantities["amplitude_V"]})
+    plain = shortest_pulses(whole)
+    assert shortest_pulses([*whole, edge]) == plain
+    assert shortest_pulses([edge, *whole]) == plain
+
+
 def test_a_sweep_whose_longest_pulse_does_not_settle_says_nothing() -> None:
     assert shortest_pulses(widths(1e-6, [1e-6, 2e-6]))[0] == []
 

@@ -69,10 +69,10 @@ def test_time_grows_with_points_periods_averages_and_settling(tmp_path: Path) ->
     assert slow - short == pytest.approx(2.5 * 16 * 2 * 0.1, rel=0.01)  # looks, averages, two periods of 0.1 s
 
 
-def test_the_smallest_dark_current_is_three_codes_over_the_effective_resistance(tmp_path: Path) -> None:
+def test_the_smallest_dark_current_is_one_code_over_the_effective_resistance(tmp_path: Path) -> None:
     """1 Mohm with the scope's 1 Mohm across it is 500 kohm."""
     found = outlook(plan(tmp_path, plan_text(dark=DARK)), code_V=1e-4)
-    assert found.smallest_dark_A == pytest.approx(3 * 1e-4 / 5e5)
+    assert found.smallest_dark_A == pytest.approx(1e-4 / 5e5)
     assert outlook(plan(tmp_path, plan_text())).smallest_dark_A is None
 
 
