@@ -145,11 +145,16 @@ def _choice(choice: Choice) -> Listing:
         for point in best_at_each_bias(choice)
     ]
     verdict = "the best pair is marked" if choice.best else "no pair meets every wish; the nearest miss is marked"
+    wish = choice.wish
+    criterion = (
+        f"The shortest pulse keeps {100 * wish.amplitude_ratio:g} % of its amplitude and its width to "
+        f"{100 * wish.distortion_ratio:g} %. Rise, shortest pulse and dark current are what the fits predict."
+    )
     return Listing(
-        title=f"{choice.device or 'unnamed device'}{element}: {verdict}",
-        columns=["", "bias", "load", "signal", "rise", "shortest pulse", "dark current", "misses"],
+        title=f"{choice.device or 'unnamed device'}{element}, for a pulse of {format_quantity(wish.pulse_width_s, 's')}: {verdict}",
+        columns=["", "bias", "load", "signal", "rise", "shortest pulse", "dark current", "what it misses"],
         rows=rows,
-        notes=choice.notes,
+        notes=(criterion, *choice.notes),
     )
 
 
@@ -191,5 +196,5 @@ def screening_listings(screening: Screening) -> list[Listing]:
     columns = ["lot", "device", "element", "limit", "measured", "verdict", "why"]
     return [
         Listing(title=f"Devices ({rule})", columns=columns, rows=rows),
-        Listing(title="Lots", columns=["lot", "verdict", "passed", "failed", "undecided"], rows=lots),
+        Listing(title="Lots", columns=["lot", "verdict", "devices passed", "failed", "undecided"], rows=lots),
     ]

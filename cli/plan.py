@@ -26,7 +26,10 @@ def new(
     path: Annotated[Path, typer.Argument(metavar="FILE", help="The plan to write.")] = Path("plan.toml"),
     *,
     kind: Annotated[
-        str, typer.Option("--kind", metavar="KIND", help="photodiode, pin, transistor_switch or optocoupler.")
+        str,
+        typer.Option(
+            "--kind", metavar="KIND", help="photodiode, pin, transistor_switch, optocoupler or dual_optocoupler."
+        ),
     ] = "photodiode",
     elements: Annotated[int, typer.Option("--elements", metavar="N", help="A dual part has 2.", min=1, max=16)] = 1,
 ) -> int:
@@ -40,8 +43,12 @@ def new(
     from darkedge.analysis.files.atomic import write_atomic
     from darkedge.analysis.files.plan_text import KINDS, plan_text
 
+    if kind == "dual_optocoupler":
+        kind, elements = "optocoupler", max(elements, 2)
     if kind not in KINDS:
-        raise InputError("not a kind of device", where="--kind", found=repr(kind), wanted=", ".join(KINDS))
+        raise InputError(
+            "not a kind of device", where="--kind", found=repr(kind), wanted=", ".join((*KINDS, "dual_optocoupler"))
+        )
     if path.exists():
         raise InputError("there is a file already", where=str(path), mend="give another name")
     write_atomic(path, plan_text(kind, elements=elements))
@@ -130,7 +137,12 @@ def outlook_listing(title: str, found: Outlook) -> Listing:
         ["time", f"about {duration_words(found.time_s)}, hand work at one minute each"],
     ]
     if found.smallest_dark_A is not None:
-        rows.append(["smallest dark current resolved", format_quantity(float(f"{found.smallest_dark_A:.2g}"), "A")])
+        rows.append(
+            [
+                "dark current worth one code",
+                f"{format_quantity(float(f'{found.smallest_dark_A:.2g}'), 'A')}; the mean of a trace resolves less where its noise moves it by codes",
+            ]
+        )
     return Listing(title=title, columns=["", "this plan"], rows=rows)
 
 

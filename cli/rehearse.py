@@ -70,6 +70,9 @@ def rehearse(
         explained = explain_devices(intake.measurements, fixture_for=intake.fixture_for)
     for error in explained.errors:
         say(f"not fitted: {error}")
+    for found in explained.devices:
+        if found.junction is None and job.wish is not None:
+            say(f"{found.title}: no edges, so no junction is fitted")
     for listing in _truth_listings(explained, devices) + _choices(job, intake.measurements, intake.fixture_for):
         print_listing(listing)
     limits = read_limits(folder / "limits.toml")
@@ -89,7 +92,11 @@ def rehearse(
     wrong = _wrong_verdicts(screening, devices)
     for text in wrong:
         say(f"error: {text}")
-    typer.echo("Every verdict is what the part was made to be." if not wrong else "Not every verdict is right.")
+    typer.echo(
+        "Every verdict is right: good parts pass, and the slow, the leaky and the dead part fail."
+        if not wrong
+        else "Not every verdict is right."
+    )
     typer.echo(f"report: {(folder / 'report.html').resolve()}")
     say(
         f"took {time.monotonic() - begun:.0f} s; the parts are invented, the code and the sockets are those of a real bench"
@@ -219,11 +226,16 @@ def _truth_listings(explained: Explained, devices: list[tuple[Fault, Device]]) -
                 continue
             inside = "inside" if estimate.lo95 <= truth <= estimate.hi95 else "OUTSIDE"
             cells = [cell(estimate, name), interval(estimate, name), cell(Estimate(value=truth, u=0.0), name), inside]
-            rows.append([found.device, str(fault), PARAMETER_WORDS[name], *cells])
+            rows.append([found.device, made_words(fault), PARAMETER_WORDS[name], *cells])
     if not rows:
         return []
     columns = ["device", "made", "parameter", "fitted", "95 % interval", "made with", ""]
     return [Listing(title="Fitted, beside what the parts were made with", columns=columns, rows=rows)]
+
+
+def made_words(fault: Fault) -> str:
+    """What a part was made to be."""
+    return "good" if fault == "none" else str(fault)
 
 
 def _wrong_verdicts(screening: Screening, devices: list[tuple[Fault, Device]]) -> list[str]:
@@ -237,7 +249,7 @@ def _wrong_verdicts(screening: Screening, devices: list[tuple[Fault, Device]]) -
         wanted = "pass" if fault == "none" else "fail"
         if held.verdict != wanted:
             found.append(
-                f"{held.device}, element {held.element}: made {fault}, the verdict is {held.verdict}, not {wanted}"
+                f"{held.device}, element {held.element}: made {made_words(fault)}, the verdict is {held.verdict}, not {wanted}"
             )
     judged = {held.device for held in screening.devices}
     found += [f"{name}: no verdict at all" for name in made if name not in judged]

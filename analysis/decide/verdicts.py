@@ -203,7 +203,11 @@ def _judge_repeats(repeats: Sequence[Measurement], limit: Limit, limits: Limits)
     estimate = _mean(repeats, limit.quantity)
     if estimate is None:
         flags = sorted({flag for row in repeats if limit.quantity not in row.quantities for flag in row.flags})
-        reason = f"not measured: {', '.join(flags)}" if flags else "the capture does not show this quantity"
+        reason = (
+            f"not measured: {', '.join(flag.replace('_', ' ') for flag in flags)}"
+            if flags
+            else "the capture does not show this quantity"
+        )
         return LimitVerdict(
             limit=limit, verdict=Verdict.UNDECIDED, estimate=None, probability_conforming=None, captures=captures,
             reason=reason,
@@ -314,7 +318,7 @@ def _reason(verdict: Verdict, estimate: Estimate, probability: float | None, lim
     if probability is None:
         beyond = verdict is Verdict.FAIL
         return (
-            "the bound known lies beyond the limit"
+            "all that is known, a 95 % bound, lies beyond the limit"
             if beyond
             else "only a bound is known, and it does not clear the limit"
         )
@@ -328,5 +332,5 @@ def _reason(verdict: Verdict, estimate: Estimate, probability: float | None, lim
     bound = limit.upper if above else limit.lower
     assert bound is not None
     share = f" ({100 * abs(estimate.value / bound - 1):.0f} %)" if bound else ""
-    gap = format_quantity(abs(estimate.value - bound), unit_of(limit.quantity).symbol)
+    gap = format_quantity(float(f"{abs(estimate.value - bound):.2g}"), unit_of(limit.quantity).symbol)
     return f"{'above' if above else 'below'} the limit by {gap}{share}"
