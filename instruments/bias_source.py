@@ -19,6 +19,8 @@ STEPS_PER_s = 20.0
 SETTLE_TIME_CONSTANTS = 7.0
 SETTLE_LEAST_s = 0.05
 DISCHARGE_LIMIT_s = 30.0
+DISCHARGE_BLIND_s = 5.0
+"""How long is waited before hands may touch where the rail cannot be read (common practice, no source)."""
 READ_RATIO, READ_ROOM_V = 0.02, 0.05
 """How far the rail may read from what was set: 2 % and 50 mV (common practice, no source)."""
 OVER_RATIO = 1.005
@@ -80,7 +82,7 @@ class SwitchedBias:
         return self.level_V
 
     def discharge(self) -> None:
-        """Down to zero, then wait until it reads below 2 V, or for the decoupling's time where it cannot be read.
+        """Down to zero, then wait until it reads below 2 V, or for five seconds where it cannot be read.
 
         Raises
         ------
@@ -94,7 +96,10 @@ class SwitchedBias:
         waited = 0.0
         while True:
             self.read_V = self._read_voltage()
-            if self.read_V is None or abs(self.read_V) < DISCHARGED_V:
+            if self.read_V is None:
+                self._wait(DISCHARGE_BLIND_s)
+                return
+            if abs(self.read_V) < DISCHARGED_V:
                 return
             if waited >= DISCHARGE_LIMIT_s:
                 raise RefusedByInstrument(

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from darkedge.analysis.bench import Bench
-from darkedge.analysis.files.run_folder import JournalRow, RunFolder
+from darkedge.analysis.files.run_folder import JournalRow, RunFolder, alone_in
 from darkedge.analysis.plan import Plan
 from darkedge.instruments.hands import Hands
 from darkedge.instruments.live_bench import LiveBench, OpenLink, Time, ends_on_terminate, open_bench, open_visa
@@ -75,27 +75,27 @@ def run_plan(
     KeyboardInterrupt
         Ctrl-C, or the end of the program asked for from outside, with the same said.
     """
-    known = RunFolder.go_on(folder, plan) if resume else None
-    with (
-        ends_on_terminate(),
-        open_bench(
+    with ends_on_terminate(), alone_in(folder):
+        known = RunFolder.go_on(folder, plan) if resume else None
+        if known is None:
+            RunFolder.check_new(folder, plan)
+        with open_bench(
             bench, plan, hands=course.hands, folder=bench_folder, clock=course.clock, open_link=course.open_link,
             heard=course.heard, left_on=course.left_on,
-        ) as live,
-    ):  # fmt: skip
-        course.met(live)
-        run = known or RunFolder.create(folder, plan, bench_record(live, plan))
-        taker = PointTaker(
-            live, plan, naming, course.hands, clock=course.clock, utc=course.utc, dark_window=_dark_window(run.rows)
-        )
-        swept = sweep(
-            taker,
-            run,
-            propose=course.propose or in_plan_order(plan),
-            judge=course.judge,
-            total=len(plan.steps()),
-            progress=course.progress,
-        )
+        ) as live:  # fmt: skip
+            course.met(live)
+            run = known or RunFolder.create(folder, plan, bench_record(live, plan))
+            taker = PointTaker(
+                live, plan, naming, course.hands, clock=course.clock, utc=course.utc, dark_window=_dark_window(run.rows)
+            )
+            swept = sweep(
+                taker,
+                run,
+                propose=course.propose or in_plan_order(plan),
+                judge=course.judge,
+                total=len(plan.steps()),
+                progress=course.progress,
+            )
     return Ran(folder=folder, swept=swept)
 
 

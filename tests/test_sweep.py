@@ -183,6 +183,42 @@ def test_an_existing_run_is_never_written_over(table: Desk) -> None:
         table.run(plan)
 
 
+def test_nothing_is_opened_for_a_run_that_cannot_be_begun(table: Desk) -> None:
+    plan = table.plan(plan_text())
+    table.run(plan)
+    table.heard.clear()
+    with pytest.raises(InputError, match="there is a run in this folder already"):
+        table.run(plan)
+    with pytest.raises(PlanError, match="of another plan"):
+        table.run(table.plan(plan_text(biases="[6]")), resume=True)
+    assert table.heard == []
+
+
+@pytest.mark.skipif(os.name == "nt", reason="processes are told apart otherwise there")
+def test_a_second_sweep_is_kept_out_and_a_dead_one_is_not(table: Desk) -> None:
+    plan, note = table.plan(plan_text()), table.folder / ".SP-2-01.sweeping"
+    note.write_text("1")
+    with pytest.raises(InputError, match=r"another sweep is under way in this folder; found process 1"):
+        table.run(plan)
+    note.write_text("999999999")
+    table.run(plan)
+    assert not note.exists()
+
+
+def test_where_the_rail_cannot_be_read_hands_wait_for_the_decoupling(tmp_path: Path) -> None:
+    shipped = (Path(__file__).resolve().parents[1] / "instruments/dialects/scpi-1999.toml").read_text("utf-8")
+    (tmp_path / "blind.toml").write_text(
+        shipped.replace('read_voltage = { get = "MEAS:VOLT?" }', 'read_voltage = { absent = "it has no meter" }')
+    )
+    with desk(tmp_path) as found:
+        bench = found.bench()
+        blind = replace(bench, bias=replace(bench.bias, dialect="blind.toml"))
+        ran = found.run(found.plan(plan_text(loads='["1 kohm", "10 kohm"]')), bench=blind)
+        assert found.time.elapsed_s > 2 * 5.0
+        assert captures(found)["0001_pulse.csv"].conditions.bias_read_V is None
+        assert ran.swept.taken == 2
+
+
 class Stop(Exception):  # noqa: N818 - a stand-in for anything that can happen
     """Something that nobody foresaw."""
 

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+import contextlib
 import csv
 import io
 import json
 import os
 import tomllib
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import asdict, dataclass, fields
 from pathlib import Path
 
@@ -53,6 +54,22 @@ class RunFolder:
     def __init__(self, folder: Path, rows: Sequence[JournalRow] = ()) -> None:
         self.folder, self.rows = folder, list(rows)
 
+    @staticmethod
+    def check_new(folder: Path, plan: Plan) -> None:
+        """Make sure that a run can be begun here, before any instrument is opened.
+
+        Raises
+        ------
+        InputError, FixtureError
+            As `create`.
+        """
+        if (folder / JOURNAL).exists() or (folder / PLAN).exists():
+            raise InputError(
+                "there is a run in this folder already", where=str(folder),
+                mend="go on with it (--resume), or give another --device or --into",
+            )  # fmt: skip
+        _fixture_files(plan)
+
     @classmethod
     def create(cls, folder: Path, plan: Plan, bench: Mapping[str, object]) -> RunFolder:
         """Make a run folder: plan and bench as they are, the fixture that the plan names beside them.
@@ -64,11 +81,7 @@ class RunFolder:
         FixtureError
             The fixture that the plan names is not there, or its reference captures cannot go with it.
         """
-        if (folder / JOURNAL).exists() or (folder / PLAN).exists():
-            raise InputError(
-                "there is a run in this folder already", where=str(folder),
-                mend="go on with it (--resume), or give another --device or --into",
-            )  # fmt: skip
+        cls.check_new(folder, plan)
         copies = _fixture_files(plan)
         try:
             (folder / CAPTURES).mkdir(parents=True, exist_ok=True)
@@ -138,6 +151,50 @@ class RunFolder:
                 mend="check space and permission",
             ) from error
         self.rows.append(row)
+
+
+@contextlib.contextmanager
+def alone_in(folder: Path) -> Iterator[None]:
+    """Keep a second sweep out of a run folder while one is under way.
+
+    A note with the number of the process stands beside the folder; one that a dead process left behind does not count.
+
+    Raises
+    ------
+    InputError
+        Another sweep is under way there, or the folder cannot be written.
+    """
+    note = folder.parent / f".{folder.name}.sweeping"
+    try:
+        folder.parent.mkdir(parents=True, exist_ok=True)
+        holder = _process_in(note)
+        if holder is not None:
+            raise InputError(
+                "another sweep is under way in this folder", where=str(folder), found=f"process {holder}",
+                mend=f"wait for it, or end it; if there is none, delete {note}",
+            )  # fmt: skip
+        note.write_text(str(os.getpid()), encoding="ascii")
+    except OSError as error:
+        raise InputError(
+            "the folder cannot be written", where=str(folder.parent), found=error.strerror or ""
+        ) from error
+    try:
+        yield
+    finally:
+        note.unlink(missing_ok=True)
+
+
+def _process_in(note: Path) -> int | None:
+    """The living process that a note names, `None` where there is no note or nobody alive."""
+    try:
+        number = int(note.read_text("ascii"))
+        if os.name != "nt":  # where asking whether a process lives would end it
+            os.kill(number, 0)
+    except (FileNotFoundError, ValueError, ProcessLookupError):
+        return None
+    except PermissionError:
+        return number
+    return None if number == os.getpid() else number
 
 
 def read_journal(path: Path) -> list[JournalRow]:
