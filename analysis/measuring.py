@@ -28,10 +28,9 @@ class Failure:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class _Still:
+class StillTrace:
     """A dark or offset trace, kept as its summary until all offset traces of the run are known."""
 
-    place: int
     name: str
     element: int
     conditions: Conditions
@@ -86,23 +85,42 @@ def measure_captures(
     list of Failure
         The reasons for those.
     """
-    rows: list[Measurement | None] = []
-    still: list[_Still] = []
+    found: list[Measurement | StillTrace] = []
     failures: list[Failure] = []
     for capture in captures:
         try:
-            if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
-                traces = _summaries(capture, len(rows))
-                still.extend(traces)
-                rows.extend([None] * len(traces))
-            else:
-                rows.extend(measure_pulse_capture(capture, fixture=fixture_for(capture.name)))
+            found.extend(measure_one(capture, fixture_for(capture.name)))
         except DarkedgeError as error:
             failures.append(Failure(capture=capture.name, error=error))
-            rows.append(refused_measurement(capture.name))
-    for place, measurement in _still_measurements(still, fixture_for):
-        rows[place] = measurement
-    return [_with_expiry(row, fixture_for(row.capture), today) for row in rows if row is not None], failures
+            found.append(refused_measurement(capture.name))
+    return finish_measuring(found, fixture_for=fixture_for, today=today), failures
+
+
+def measure_one(capture: Capture, fixture: Fixture) -> Sequence[Measurement | StillTrace]:
+    """Measure one capture as far as it goes by itself: a still trace waits for the offset traces of its run.
+
+    Raises
+    ------
+    DarkedgeError
+        The capture cannot be measured.
+    """
+    if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
+        return _summaries(capture)
+    return measure_pulse_capture(capture, fixture=fixture)
+
+
+def finish_measuring(
+    found: Sequence[Measurement | StillTrace], *, fixture_for: FixtureFor, today: date | None = None
+) -> list[Measurement]:
+    """Measure the still traces, now that all are known, and flag what was taken with an expired fixture; the order stays."""
+    rows: list[Measurement] = [refused_measurement("")] * len(found)
+    still = [(place, item) for place, item in enumerate(found) if isinstance(item, StillTrace)]
+    for place, item in enumerate(found):
+        if isinstance(item, Measurement):
+            rows[place] = item
+    for (place, _), row in zip(still, _still_measurements([trace for _, trace in still], fixture_for), strict=True):
+        rows[place] = row
+    return [_with_expiry(row, fixture_for(row.capture), today) for row in rows]
 
 
 def _with_expiry(row: Measurement, fixture: Fixture, today: date | None) -> Measurement:
@@ -120,23 +138,22 @@ def _taken_on(conditions: Conditions) -> date | None:
         return None
 
 
-def _summaries(capture: Capture, place: int) -> list[_Still]:
+def _summaries(capture: Capture) -> list[StillTrace]:
     known = capture.conditions
     return [
-        _Still(
-            place=place + index,
+        StillTrace(
             name=capture.name,
             element=known.element if known.element is not None and len(capture.outputs) == 1 else element,
             conditions=known,
             summary=summarise_trace(record, known),
             remarks=capture.remarks,
         )
-        for index, (element, record) in enumerate(sorted(capture.outputs.items()))
+        for element, record in sorted(capture.outputs.items())
     ]
 
 
-def _still_measurements(still: Sequence[_Still], fixture_for: FixtureFor) -> Iterable[tuple[int, Measurement]]:
-    offsets: dict[tuple[object, ...], list[_Still]] = {}
+def _still_measurements(still: Sequence[StillTrace], fixture_for: FixtureFor) -> Iterable[Measurement]:
+    offsets: dict[tuple[object, ...], list[StillTrace]] = {}
     for trace in sorted(still, key=lambda t: t.order):
         if trace.conditions.kind is Kind.OFFSET:
             offsets.setdefault(trace.bench_place, []).append(trace)
@@ -152,21 +169,18 @@ def _still_measurements(still: Sequence[_Still], fixture_for: FixtureFor) -> Ite
             )
             if current is not None:
                 quantities["dark_current_A"] = current
-        yield (
-            trace.place,
-            Measurement(
-                capture=trace.name,
-                element=trace.element,
-                conditions=trace.conditions,
-                quantities=quantities,
-                flags=(*trace.remarks, *flags),
-                levels="mean",
-                estimator="offset subtracted" if quantities else None,
-            ),
+        yield Measurement(
+            capture=trace.name,
+            element=trace.element,
+            conditions=trace.conditions,
+            quantities=quantities,
+            flags=(*trace.remarks, *flags),
+            levels="mean",
+            estimator="offset subtracted" if quantities else None,
         )
 
 
-def _around(trace: _Still, offsets: Sequence[_Still]) -> Sequence[_Still]:
+def _around(trace: StillTrace, offsets: Sequence[StillTrace]) -> Sequence[StillTrace]:
     """The offset traces taken just before and just after."""
     after = bisect_left(offsets, trace.order, key=lambda o: o.order)
     return offsets[max(0, after - 1) : after + 1]

@@ -64,6 +64,7 @@ Channels = Annotated[
         show_default=False,
     ),
 ]
+Jobs = Annotated[int, typer.Option("--jobs", metavar="N", help="Processes that read and measure.", min=1, max=256)]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of a table.")]
 PlotFolder = Annotated[
     Path | None,
@@ -101,6 +102,7 @@ def take_in_paths(
     conditions: Path | None,
     fixture: Path | None,
     channels: str | None,
+    jobs: int = 1,
 ) -> Intake:
     """Read and measure what the paths hold, with a progress bar, and tell what was refused."""
     from rich.console import Console
@@ -108,8 +110,14 @@ def take_in_paths(
 
     from darkedge.analysis.files.intake import take_in
 
-    with Progress(console=Console(stderr=True), transient=True) as progress:
-        task = progress.add_task("measuring", total=None)
+    progress = Progress(console=Console(stderr=True), transient=True)
+    task = progress.add_task("measuring", total=None)
+
+    def tell(done: int, total: int) -> None:
+        progress.start()  # no sooner: the bar has a thread of its own, and processes are copied before
+        progress.update(task, completed=done, total=total)
+
+    try:
         intake = take_in(
             paths,
             names=names,
@@ -117,8 +125,11 @@ def take_in_paths(
             fixture=fixture,
             channels=channels,
             today=datetime.now(UTC).date(),
-            progress=lambda done, total: progress.update(task, completed=done, total=total),
+            jobs=jobs,
+            progress=tell,
         )
+    finally:
+        progress.stop()
     for refusal in intake.refusals:
         say(f"refused: {refusal.error}")
     return intake

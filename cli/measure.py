@@ -11,6 +11,7 @@ from darkedge.cli.common import (
     Channels,
     ConditionsTable,
     FixtureFile,
+    Jobs,
     Json,
     Names,
     Paths,
@@ -41,6 +42,7 @@ def measure(
     fixture: FixtureFile = None,
     channels: Channels = None,
     out: Out = None,
+    jobs: Jobs = 1,
     json: Json = False,
 ) -> int:
     """Measure captures: levels, rise and fall time, delays, widths, dark current, each with its uncertainty.
@@ -49,7 +51,7 @@ def measure(
 
     darkedge measure sample_captures/foreign --names '{device}_{bias_V}V_{load_ohm}ohm'
     """
-    intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels)
+    intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels, jobs=jobs)
     from darkedge.analysis.files.tables import table_json, write_table
     from darkedge.cli.listing import flag_lines, measurement_listing
 

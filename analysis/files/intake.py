@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+import multiprocessing
+import sys
+import threading
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass, field
 from datetime import date
 from pathlib import Path
@@ -13,14 +17,14 @@ from darkedge.analysis.files.captures import read_capture
 from darkedge.analysis.files.conditions import ConditionsTable, read_conditions
 from darkedge.analysis.files.fixture_file import read_fixture
 from darkedge.analysis.files.gather import Source, find_captures
-from darkedge.analysis.files.load import Refusal, load_captures
+from darkedge.analysis.files.load import Refusal, load_capture
 from darkedge.analysis.files.names import NamePattern
 from darkedge.analysis.files.roles import ChannelRoles
 from darkedge.analysis.files.runs import RunContext, read_run_context
 from darkedge.analysis.files.tables import is_table, read_table
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
-from darkedge.analysis.measuring import measure_captures, refused_measurement
+from darkedge.analysis.measuring import StillTrace, finish_measuring, measure_one, refused_measurement
 from darkedge.analysis.plan import Plan
 from darkedge.analysis.waveform.measure import measure_pulse_capture
 
@@ -68,6 +72,7 @@ def take_in(
     fixture: Path | None = None,
     channels: str | None = None,
     today: date,
+    jobs: int = 1,
     progress: Progress | None = None,
 ) -> Intake:
     """Read and measure everything under the paths.
@@ -83,6 +88,8 @@ def take_in(
         Table of conditions; fixture file for all captures.
     today : date
         Tells an expired fixture where a capture does not say when it was taken.
+    jobs : int
+        Processes that read and measure. The result is the same, in the same order, for any number.
     progress : callable, optional
         Called with the captures done and the number of all.
 
@@ -105,14 +112,19 @@ def take_in(
         )
     rows = [row for table in tables for row in read_table(table)]
     reading = _Reading(find_captures(rest) if rest else [], pattern, stated, roles, given)
-    measured, failures = measure_captures(
-        reading.captures(progress), fixture_for=lambda name: reading.fixtures.get(name, UNKNOWN_FIXTURE), today=today
+    if stated is not None:
+        stated.check_against(list(reading.sources))
+    found: list[Measurement | StillTrace] = []
+    refused: list[Refused] = []
+    for done, taken in enumerate(take_each(reading, jobs=jobs), start=1):
+        found.extend(taken.rows)
+        if taken.refused is not None:
+            refused.append(taken.refused)
+        if progress is not None:
+            progress(done, len(reading.sources))
+    measured = finish_measuring(
+        found, fixture_for=lambda name: reading.fixtures.get(name, UNKNOWN_FIXTURE), today=today
     )
-    refused = [Refused(name=r.name, error=r.error) for r in reading.refusals]
-    refused += [Refused(name=f.capture, error=f.error.at(f.capture)) for f in failures]
-    order = {name: place for place, name in enumerate(reading.sources)}
-    measured += [refused_measurement(r.name) for r in reading.refusals]
-    measured.sort(key=lambda m: order[m.capture])
     rows += measured
     fixtures = dict(reading.fixtures)
     if given is not None:
@@ -127,8 +139,49 @@ def take_in(
     )
 
 
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Taken:
+    """What one source gave: its rows, still traces among them, and the reason where it was refused."""
+
+    rows: tuple[Measurement | StillTrace, ...]
+    refused: Refused | None = None
+
+
+def take_each(reading: _Reading, *, jobs: int) -> Iterator[Taken]:
+    """Take the sources in their order, in one process or in several.
+
+    Raises
+    ------
+    InputError
+        `jobs` is below 1.
+    """
+    names = list(reading.sources)
+    if jobs < 1:
+        raise InputError("jobs is not a number of processes", found=str(jobs), wanted="1 or more")
+    if jobs == 1 or len(names) < 2 * jobs:
+        yield from map(reading.take, names)
+        return
+    # Copying this process is quick, but safe only where no other thread runs; else each starts afresh.
+    quick = sys.platform == "linux" and threading.active_count() == 1
+    context = multiprocessing.get_context("fork" if quick else "spawn")
+    with ProcessPoolExecutor(jobs, mp_context=context, initializer=_begin_work, initargs=(reading,)) as pool:
+        yield from pool.map(_take_in_worker, names, chunksize=min(32, max(1, len(names) // (8 * jobs))))
+
+
+_WORK: list[_Reading] = []
+"""What a worker process reads with; set once when it starts."""
+
+
+def _begin_work(reading: _Reading) -> None:
+    _WORK[:] = [reading]
+
+
+def _take_in_worker(name: str) -> Taken:
+    return _WORK[0].take(name)
+
+
 class _Reading:
-    """Captures one after another, each with the context of its run; refusals and fixtures collect on the way."""
+    """What every source is read with: pattern, table, roles, and the context of its run."""
 
     def __init__(
         self,
@@ -140,7 +193,6 @@ class _Reading:
     ) -> None:
         self.sources = {source.name: source for source in sources}
         self.pattern, self.stated, self.roles, self.given = pattern, stated, roles, given
-        self.refusals: list[Refusal] = []
         self.fixtures: dict[str, Fixture] = {}
         self.contexts: dict[Path, RunContext] = {}
         for source in sources:
@@ -151,27 +203,26 @@ class _Reading:
             if fixture is not None:
                 self.fixtures[source.name] = fixture
 
-    def captures(self, progress: Progress | None) -> Iterator[Capture]:
-        for done, item in enumerate(self._load(list(self.sources.values())), start=1):
+    def take(self, name: str) -> Taken:
+        """Read and measure one source; never raises for it."""
+        item = self._load(self.sources[name])
+        try:
             if isinstance(item, Refusal):
-                self.refusals.append(item)
-            else:
-                try:
-                    yield self._in_its_run(item)
-                except CaptureError as error:
-                    self.refusals.append(Refusal(name=item.name, error=error))
-            if progress is not None:
-                progress(done, len(self.sources))
+                raise item.error
+            return Taken(rows=tuple(measure_one(self._in_its_run(item), self.fixtures.get(name, UNKNOWN_FIXTURE))))
+        except DarkedgeError as error:
+            named = error if isinstance(item, Refusal) else error.at(name)
+            return Taken(rows=(refused_measurement(name),), refused=Refused(name=name, error=named))
 
     def again(self, name: str) -> Capture:
         """Read one capture again, for a picture of it."""
-        item = next(iter(self._load([self.sources[name]])))
+        item = self._load(self.sources[name])
         if isinstance(item, Refusal):
             raise item.error
         return self._in_its_run(item)
 
-    def _load(self, sources: Sequence[Source]) -> Iterator[Capture | Refusal]:
-        return load_captures(sources, names=self.pattern, conditions=self.stated, channels=self.roles)
+    def _load(self, source: Source) -> Capture | Refusal:
+        return load_capture(source, self.pattern, self.stated, self.roles)
 
     def _in_its_run(self, capture: Capture) -> Capture:
         """Join what the plan and the lot file say with what the capture says."""

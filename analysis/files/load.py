@@ -55,12 +55,13 @@ def load_captures(
     """
     if conditions is not None:
         conditions.check_against([source.name for source in sources])
-    return (_load(source, names, conditions, channels) for source in sources)
+    return (load_capture(source, names, conditions, channels) for source in sources)
 
 
-def _load(
+def load_capture(
     source: Source, names: NamePattern | None, conditions: ConditionsTable | None, channels: ChannelRoles | None
 ) -> Capture | Refusal:
+    """Read one source with all that is stated of its conditions; see `load_captures`."""
     try:
         capture = read_capture(source.path, name=source.name, channels=channels)
         return _with_conditions(capture, source.name, names, conditions)
