@@ -9,7 +9,7 @@ from typing import Annotated, Any
 import typer
 from typer.core import TyperGroup
 
-from darkedge.cli import bench, choose, fit, measure, plan, rehearse, report, screen, sweep
+from darkedge.cli import bench, choose, fit, measure, pack, plan, rehearse, report, screen, sweep
 
 
 class _InOrder(TyperGroup):
@@ -17,7 +17,7 @@ class _InOrder(TyperGroup):
 
     def list_commands(self, ctx: Any) -> list[str]:  # noqa: ANN401 - the library keeps its type private
         """Names in order."""
-        order = ("rehearse", "bench", "plan", "sweep", "measure", "fit", "choose", "screen", "report")
+        order = ("rehearse", "bench", "plan", "sweep", "measure", "pack", "fit", "choose", "screen", "report")
         return [*order, *(name for name in self.commands if name not in order)]
 
 
@@ -48,6 +48,7 @@ app.add_typer(
 )
 app.command("sweep", short_help="Carry out a plan on a device.")(sweep.sweep)
 app.command("measure", short_help="Captures into the measurement table.")(measure.measure)
+app.command("pack", short_help="Many captures into one file.")(pack.pack)
 app.command("fit", short_help="Junction capacitance, shortest pulse, dark current.")(fit.fit)
 app.command("choose", short_help="Bias and load for a wanted pulse.")(choose.choose)
 app.command("screen", short_help="Verdicts for devices and lots.")(screen.screen)

@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from darkedge.analysis.errors import InputError
+from darkedge.analysis.files.archive import archive_names, is_archive
 
 CAPTURES = "captures"
 """The folder of a run that holds its captures."""
@@ -22,18 +23,19 @@ _SNIFF_BYTES = 4096
 class Source:
     """One capture that was found: its file, and its name relative to the argument, with `/`.
 
-    `run_folder` is the run it belongs to, `None` for a capture outside a run.
+    `run_folder` is the run it belongs to, `None` for a capture outside a run. `place` is its row in an archive, `None` for a file.
     """
 
     path: Path
     name: str
     run_folder: Path | None = None
+    place: int | None = None
 
 
 def find_captures(paths: Sequence[Path]) -> list[Source]:
     """Find the captures under the paths of a command.
 
-    A file stands for itself. A run (a folder with `captures/`) gives the files in there and nothing else; any other
+    A file stands for itself, an archive for the captures in it. A run (a folder with `captures/`) gives the files in there and nothing else; any other
     folder, a lot among them, is searched through all its folders for capture files (`.csv`, `.txt`, `.dat`, `.tsv`,
     `.asc`, no extension, each also with `.gz`), where journals, tables with a column `capture` and hidden files are
     left out. The order is that of the arguments, then the natural one of names (2 before 10). A file is listed once.
@@ -44,7 +46,7 @@ def find_captures(paths: Sequence[Path]) -> list[Source]:
     InputError
         A path that is not there, a folder that cannot be searched, a folder without captures.
     """
-    found: dict[Path, tuple[Source, Path]] = {}
+    found: dict[tuple[Path, int | None], tuple[Source, Path]] = {}
     for path in paths:
         sources = list(_under(path))
         if not sources:
@@ -54,13 +56,16 @@ def find_captures(paths: Sequence[Path]) -> list[Source]:
                 wanted="files such as 0001_pulse.csv, or a run with a folder captures/",
             )
         for source in sources:
-            found.setdefault(source.path.resolve(), (source, path))
+            found.setdefault((source.path.resolve(), source.place), (source, path))
     return _with_unlike_names(list(found.values()))
 
 
 def _under(path: Path) -> Iterator[Source]:
     if path.is_dir():
         yield from _in_folder(path, path)
+    elif is_archive(path):
+        names = archive_names(path)
+        yield from (Source(path=path, name=name, place=place) for place, name in enumerate(names))
     elif path.exists():
         run = path.parent.parent if path.parent.name == CAPTURES else None
         yield Source(path=path, name=path.name, run_folder=run)

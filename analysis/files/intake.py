@@ -13,6 +13,7 @@ from pathlib import Path
 
 from darkedge.analysis.captures import Capture, Conditions
 from darkedge.analysis.errors import CaptureError, DarkedgeError, FixtureError, InputError
+from darkedge.analysis.files.archive import archive_fixtures, is_archive, write_archive
 from darkedge.analysis.files.captures import read_capture
 from darkedge.analysis.files.conditions import ConditionsTable, read_conditions
 from darkedge.analysis.files.fixture_file import read_fixture
@@ -102,7 +103,7 @@ def take_in(
     roles = None if channels is None else ChannelRoles.parse(channels)
     stated = None if conditions is None else read_conditions(conditions)
     given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time)
-    tables = [path for path in paths if path.is_file() and is_table(path)]
+    tables = [path for path in paths if path.is_file() and is_table(path) and not is_archive(path)]
     rest = [path for path in paths if path not in tables]
     if tables and (pattern or stated):
         raise InputError(
@@ -137,6 +138,55 @@ def take_in(
         contexts=tuple(reading.contexts.values()),
         reread=reading.again,
     )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Packed:
+    """What went into an archive, and what was refused."""
+
+    count: int
+    refusals: tuple[Refused, ...]
+
+
+def pack(
+    paths: Sequence[Path],
+    out: Path,
+    *,
+    names: str | None = None,
+    conditions: Path | None = None,
+    fixture: Path | None = None,
+    channels: str | None = None,
+    progress: Progress | None = None,
+) -> Packed:
+    """Pack everything under the paths into one archive, each capture with its conditions and what is known of its bench.
+
+    Raises
+    ------
+    InputError
+        As `take_in`, or the archive cannot be written.
+    """
+    stated = None if conditions is None else read_conditions(conditions)
+    reading = _Reading(
+        find_captures(paths),
+        None if names is None else NamePattern(names),
+        stated,
+        None if channels is None else ChannelRoles.parse(channels),
+        None if fixture is None else read_fixture(fixture, edge_time=_edge_time),
+    )
+    if stated is not None:
+        stated.check_against(list(reading.sources))
+    refusals: list[Refused] = []
+
+    def captures() -> Iterator[tuple[Capture, Fixture | None]]:
+        for done, name in enumerate(reading.sources, start=1):
+            try:
+                yield reading.again(name), reading.fixtures.get(name)
+            except CaptureError as error:
+                refusals.append(Refused(name=name, error=error))
+            if progress is not None:
+                progress(done, len(reading.sources))
+
+    return Packed(count=write_archive(captures(), out), refusals=tuple(refusals))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -195,13 +245,22 @@ class _Reading:
         self.pattern, self.stated, self.roles, self.given = pattern, stated, roles, given
         self.fixtures: dict[str, Fixture] = {}
         self.contexts: dict[Path, RunContext] = {}
+        self._archived: dict[Path, list[Fixture | None]] = {}
         for source in sources:
             folder = source.run_folder
             if folder is not None and folder not in self.contexts:
                 self.contexts[folder] = read_run_context(folder, edge_time=_edge_time)
-            fixture = given or (None if folder is None else self.contexts[folder].fixture)
+            fixture = given or self._kept(source) or (None if folder is None else self.contexts[folder].fixture)
             if fixture is not None:
                 self.fixtures[source.name] = fixture
+
+    def _kept(self, source: Source) -> Fixture | None:
+        """The fixture that an archive keeps with a capture."""
+        if source.place is None:
+            return None
+        if source.path not in self._archived:
+            self._archived[source.path] = archive_fixtures(source.path)
+        return self._archived[source.path][source.place]
 
     def take(self, name: str) -> Taken:
         """Read and measure one source; never raises for it."""

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 from darkedge.analysis.captures import Capture, Conditions
 from darkedge.analysis.errors import CaptureError, InputError
+from darkedge.analysis.files.archive import read_archived
 from darkedge.analysis.files.captures import read_capture
 from darkedge.analysis.files.conditions import ConditionsTable
 from darkedge.analysis.files.gather import Source
@@ -63,7 +64,10 @@ def load_capture(
 ) -> Capture | Refusal:
     """Read one source with all that is stated of its conditions; see `load_captures`."""
     try:
-        capture = read_capture(source.path, name=source.name, channels=channels)
+        if source.place is not None:
+            capture = replace(read_archived(source.path, source.place), name=source.name)
+        else:
+            capture = read_capture(source.path, name=source.name, channels=channels)
         return _with_conditions(capture, source.name, names, conditions)
     except InputError as error:
         if isinstance(error, CaptureError):
