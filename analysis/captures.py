@@ -196,7 +196,8 @@ class Capture:
 
     `name` is the path relative to the argument it was found under, with `/`. `outputs` maps the number
     of an element (1, 2 ...) to its record; `drive` is the reference channel, `None` where there is none.
-    `remarks` are flags that the reader could tell from the file alone (codes of the flag registry).
+    `remarks` are flags that the reader could tell from the file alone (codes of the flag registry); `read_as` says in words how a file
+    of another program was understood.
     """
 
     name: str
@@ -204,6 +205,7 @@ class Capture:
     drive: Record | None = None
     conditions: Conditions = field(default_factory=Conditions)
     remarks: tuple[str, ...] = ()
+    read_as: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         if not self.outputs:

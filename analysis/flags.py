@@ -169,6 +169,11 @@ _ALL = (
         sentence="The offset of the dark trace is not known, or does not belong to it: what is left is below zero, or saw more light.",
         mend="Take offset traces at zero bias with the same load and range, between the dark traces; check the channel's polarity.",
     ),
+    Flag(
+        code="time_unit_assumed",
+        sentence="The file states no unit of time; the numbers were read as seconds.",
+        mend="Write the unit in the heading, such as time (us), or state it with --channels time=us.",
+    ),
 )
 
 REGISTRY: dict[str, Flag] = {flag.code: flag for flag in _ALL}

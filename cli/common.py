@@ -60,7 +60,7 @@ Channels = Annotated[
     typer.Option(
         "--channels",
         metavar="ROLES",
-        help="Which channel is which in other programs' files, such as 'drive=1,output=3'.",
+        help="Which channel is which in other programs' files, such as 'drive=1,output=3'; 'time=us' where no unit is stated.",
         show_default=False,
     ),
 ]

@@ -9,6 +9,7 @@ from dataclasses import dataclass
 from darkedge.analysis.columns import ALL_QUANTITIES
 from darkedge.analysis.decide.results import Choice, OperatingPoint, Screening
 from darkedge.analysis.explain import ExplainedDevice
+from darkedge.analysis.files.intake import Intake
 from darkedge.analysis.flags import REGISTRY
 from darkedge.analysis.junction.results import PARAMETERS
 from darkedge.analysis.measurement import Measurement
@@ -53,6 +54,22 @@ def measurement_listing(measurements: Sequence[Measurement]) -> Listing:
         row += [cell(m.quantities.get(q), q) for q in quantities]
         rows.append([*row, ", ".join(m.flags)])
     return Listing(title="", columns=columns, rows=rows)
+
+
+def reading_listings(intake: Intake) -> list[Listing]:
+    """For each capture how its file was understood, and which conditions are known."""
+    refused = {refusal.name for refusal in intake.refusals}
+    found = []
+    for name in intake.sources:
+        if name in refused or intake.reread is None:
+            continue
+        capture = intake.reread(name)
+        rows = [["read as", words] for words in capture.read_as or ("a row of an archive",)]
+        known = capture.conditions.known()
+        rows += [["conditions", ", ".join(f"{key} = {value}" for key, value in known.items()) or "none known"]]
+        rows += [["flags", ", ".join(capture.remarks)]] if capture.remarks else []
+        found.append(Listing(title=name, columns=["", "what was understood"], rows=rows))
+    return found
 
 
 def flag_lines(measurements: Sequence[Measurement]) -> list[str]:

@@ -43,6 +43,9 @@ def measure(
     channels: Channels = None,
     out: Out = None,
     jobs: Jobs = 1,
+    explain: Annotated[
+        bool, typer.Option("--explain", help="Show how each file was understood, and measure nothing more.")
+    ] = False,
     json: Json = False,
 ) -> int:
     """Measure captures: levels, rise and fall time, delays, widths, dark current, each with its uncertainty.
@@ -53,12 +56,15 @@ def measure(
     """
     intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels, jobs=jobs)
     from darkedge.analysis.files.tables import table_json, write_table
-    from darkedge.cli.listing import flag_lines, measurement_listing
+    from darkedge.cli.listing import flag_lines, measurement_listing, reading_listings
 
     if out is not None:
         write_table(intake.measurements, out)
         say(f"table: {out}")
-    if json:
+    if explain:
+        for listing in reading_listings(intake):
+            print_listing(listing)
+    elif json:
         typer.echo(table_json(intake.measurements))
     elif out is None:
         print_listing(measurement_listing(intake.measurements))

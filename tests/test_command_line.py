@@ -202,3 +202,10 @@ def test_the_report_is_written_where_asked_and_says_so(tmp_path: Path) -> None:
     assert str(page) in shown
     assert "limits.toml" in talk
     assert page.read_text(encoding="utf-8").startswith("<!DOCTYPE html>")
+
+
+def test_measure_can_explain_how_each_file_was_understood() -> None:
+    shown, _ = run("measure", SAMPLES / "foreign", "--names", NAMES, "--explain")
+    assert "separated by ';', decimal comma" in shown
+    assert "bias_V = 12.0, load_ohm = 1000.0" in shown
+    assert "rise" not in shown

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -12,7 +12,7 @@ from darkedge.analysis.captures import Capture, Record, TimedRecord
 from darkedge.analysis.errors import CaptureError
 from darkedge.analysis.files.layout import Layout, find_layout
 from darkedge.analysis.files.number_table import A_WAVEFORM, NumberTable, digits_behind, finite_part
-from darkedge.analysis.files.numbers import read_numbers
+from darkedge.analysis.files.numbers import BLANKS, read_numbers
 from darkedge.analysis.files.roles import ChannelRoles, assign_roles
 from darkedge.analysis.files.stated import axis_units, stated_conditions
 from darkedge.analysis.files.time_columns import Times, time_places, times_of
@@ -43,7 +43,7 @@ def parse_foreign(text: bytes, *, name: str, channels: ChannelRoles | None = Non
     Notes
     -----
     Times and volts without a stated unit are taken as seconds and volts; times only where their steps are below
-    0.1 ms and not whole numbers, volts only where not all are whole numbers (those would be counts or logic states).
+    0.1 ms and not whole numbers (remarked `time_unit_assumed` where they are plain decimals), volts only where not all are whole numbers (those would be counts or logic states).
     Blank samples at the ends of a channel are cut off; between others they are refused. A channel in amperes can be
     the drive, which gives times only.
 
@@ -65,19 +65,50 @@ def parse_foreign(text: bytes, *, name: str, channels: ChannelRoles | None = Non
     drive = None if roles.drive is None else found[roles.drive]
     used = [*outputs.values(), *([] if drive is None else [drive])]
     _refuse_counts(table, used)
-    times = {place: times_of(table, place, counting) for place in {channel.time_place for channel in used}}
-    _refuse_unlike_times(table, list(times.values()), stated=channels is not None)
+    told = None if channels is None else channels.time_scale
+    times = {place: times_of(table, place, counting, told) for place in {channel.time_place for channel in used}}
+    _refuse_unlike_times(table, list(times.values()), stated=channels is not None and bool(channels.outputs))
     drive_record = None if drive is None else _record(table, drive, times[drive.time_place], drive=True)
     records = {element: _record(table, c, times[c.time_place]) for element, c in outputs.items()}
     uneven = any(isinstance(record, TimedRecord) for record in (drive_record, *records.values()))
-    remarks = {"uneven_time": uneven, "min_max_record": bool(companions)}
+    assumed = any(axis.unit_assumed for axis in times.values())
+    remarks = {"uneven_time": uneven, "min_max_record": bool(companions), "time_unit_assumed": assumed}
     return Capture(
         name=name,
         drive=drive_record,
         outputs=records,
         conditions=stated_conditions(layout.settings),
         remarks=tuple(code for code, true in remarks.items() if true),
+        read_as=_understood(table, drive, outputs, times),
     )
+
+
+def _understood(
+    table: NumberTable, drive: _Channel | None, outputs: Mapping[int, _Channel], times: Mapping[int | None, Times]
+) -> tuple[str, ...]:
+    """In words: how the numbers are written, which column is what, in which unit, and what was left aside."""
+    body = table.layout.body
+    separator = {"\t": "tabulators", BLANKS: "blanks"}.get(body.writing.separator, f"{body.writing.separator!r}")
+    mark = "comma" if body.writing.decimal == "," else "point"
+    words = [
+        f"numbers from line {body.first_line} on, {len(table.values)} rows, separated by {separator}, decimal {mark}"
+    ]
+    for time in times.values():
+        where = "counted rows" if time.place is None else table.called(time.place)
+        assumed = ", no unit stated, taken as seconds" if time.unit_assumed else ""
+        words.append(f"time: {where}{assumed}, from {time.axis.t0_s:.6g} s in steps of {time.axis.dt_s:.6g} s")
+    for role, channel in (("drive", drive), *((f"output of element {k}", c) for k, c in outputs.items())):
+        if channel is None:
+            words.append("drive: none")
+            continue
+        unit = table.layout.columns[channel.place].unit or table.axis_unit(Dimension.VOLTAGE)
+        stated = "no unit stated, taken as V" if unit is None else f"in {unit.text}"
+        words.append(f"{role}: {table.called(channel.place)}, {stated}")
+    used = {c.place for c in outputs.values()} | {t.place for t in times.values()} | ({drive.place} if drive else set())
+    aside = [table.called(place) for place in range(len(table.layout.columns)) if place not in used]
+    if aside:
+        words.append(f"left aside: {', '.join(aside)}")
+    return tuple(words)
 
 
 def _refuse_spectra(layout: Layout) -> None:

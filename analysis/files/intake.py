@@ -303,6 +303,7 @@ class _Reading:
             drive=capture.drive,
             conditions=joined,
             remarks=capture.remarks,
+            read_as=capture.read_as,
         )
 
 

@@ -98,6 +98,7 @@ def parse_capture(text: bytes, *, name: str) -> Capture:
         outputs=_outputs(by_column, axis, head.conditions),
         conditions=head.conditions,
         remarks=("uneven_time",) if axis.stamps_s is not None else (),
+        read_as=("a capture file of darkedge",),
     )
 
 

@@ -7,6 +7,7 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 from darkedge.analysis.errors import CaptureError, InputError
+from darkedge.analysis.files.units_written import Dimension, read_unit
 
 _DRIVE_WORDS = {"drive", "input", "generator", "gen", "led", "emitter", "laser", "stimulus", "excitation", "vin"}
 _OUTPUT_WORDS = {"output", "out", "detector", "det", "photodiode", "pd", "collector", "receiver", "response", "vout"}
@@ -20,25 +21,30 @@ class ChannelRoles:
     """What the user says of the channels: each a name, or a number.
 
     A number means the channel whose name ends in it (`2` is `CH2`, `C2`, `Channel 2`); where no channel is numbered,
-    it counts the channels from 1.
+    it counts the channels from 1. `time_scale` is seconds in one unit of the times, `None` where the user does not say.
     """
 
     drive: str | None = None
     outputs: Mapping[int, str]
+    time_scale: float | None = None
 
     @classmethod
     def parse(cls, text: str) -> ChannelRoles:
-        """Read `drive=1,output=3` or, with several elements, `drive=1,output=2,output2=3`.
+        """Read `drive=1,output=3` or, with several elements, `drive=1,output=2,output2=3`; `time=us` beside it or alone.
 
         Raises
         ------
         InputError
-            No role or a role twice, an unknown role, one channel in two roles, no output.
+            No role or a role twice, an unknown role, one channel in two roles, no output, a unit that is none of time.
         """
         where = f"--channels {text}"
         found: dict[str, str] = {}
+        time_scale: float | None = None
         for part in text.split(","):
             role, equals, channel = (piece.strip() for piece in part.partition("="))
+            if role == "time" and channel and time_scale is None:
+                time_scale = _time_scale(channel, where)
+                continue
             match = re.fullmatch(r"drive|output([1-9]\d*)?", role)
             if not equals or not channel or match is None:
                 raise InputError(
@@ -50,9 +56,17 @@ class ChannelRoles:
                 raise InputError("a role or channel is given twice", where=where, found=repr(part.strip()))
             found[role] = channel
         drive = found.pop("drive", None)
-        if not found:
+        if not found and (drive is not None or time_scale is None):
             raise InputError("no output is named", where=where, mend="add the output's channel, such as output=2")
-        return cls(drive=drive, outputs={int(role.removeprefix("output") or 1): c for role, c in found.items()})
+        outputs = {int(role.removeprefix("output") or 1): c for role, c in found.items()}
+        return cls(drive=drive, outputs=outputs, time_scale=time_scale)
+
+
+def _time_scale(text: str, where: str) -> float:
+    unit = read_unit(text)
+    if unit is None or unit.dimension is not Dimension.TIME:
+        raise InputError("not a unit of time", where=where, found=repr(text), wanted="s, ms, us or ns")
+    return unit.scale
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -82,7 +96,7 @@ def assign_roles(names: Sequence[str], stated: ChannelRoles | None = None) -> As
     CaptureError
         A stated channel is not in the file, or the roles cannot be told.
     """
-    if stated is not None:
+    if stated is not None and stated.outputs:
         outputs = {element: _find(names, channel) for element, channel in stated.outputs.items()}
         return Assignment(drive=_find(names, stated.drive) if stated.drive is not None else None, outputs=outputs)
     by_words = _by_words(names)

@@ -19,6 +19,8 @@ from darkedge.analysis.files.units_written import Dimension
 LONGEST_BARE_STEP_S = 1e-4
 """Times without a unit are taken as seconds only below this step; above it they may be in any unit."""
 
+_SAME_STEP_RATIO = 0.01
+
 _TIME_NAMES = re.compile(r"(?:time|t|tiempo|zeit|temps|tempo|tid|x|x-axis)[ _]?\d*\b", re.IGNORECASE)
 _OTHER_NAMES = re.compile(
     r"\b(?:freq|hertz|volt|bias|curr|capac|wavel|temp(?:erat|\b)|dist|posit|angle|cycle|phase|power|leak|dark|load)"
@@ -30,12 +32,16 @@ _OTHER_NAMES = re.compile(
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Times:
-    """One time axis and the rows it holds for: from `first` on, `count` of them. `place` is `None` for row numbers."""
+    """One time axis and the rows it holds for: from `first` on, `count` of them. `place` is `None` for row numbers.
+
+    `unit_assumed` says that the file states no unit, and that plain decimals were taken for seconds.
+    """
 
     place: int | None
     axis: TimeAxis
     first: int
     count: int
+    unit_assumed: bool = False
 
     @property
     def stamps_s(self) -> FloatArray:
@@ -83,8 +89,10 @@ def time_places(table: NumberTable) -> tuple[list[int], list[int]]:
     return times, counting
 
 
-def times_of(table: NumberTable, place: int | None, counting: Sequence[int]) -> Times:
+def times_of(table: NumberTable, place: int | None, counting: Sequence[int], told: float | None = None) -> Times:
     """The time axis in a column of times or of sample numbers, or, with `place` `None`, in the number of the row.
+
+    `told` is seconds in one unit of the times, as the user says.
 
     Raises
     ------
@@ -93,13 +101,19 @@ def times_of(table: NumberTable, place: int | None, counting: Sequence[int]) -> 
     """
     if place is None or place in counting:
         return _counted_times(table, place)
-    scale = _time_scale(table, place)
+    scale, assumed = _time_scale(table, place, told)
     column = table.values[:, place] * scale
     first, count = finite_part(table, column, place)
     stamps = column[first : first + count]
     increments = stated_steps(table.layout.settings, only_named=False)
     quanta = _quanta(table, place, stamps / scale) * scale if increments else None
-    return Times(place=place, axis=_axis(table, stamps, first, place, quanta, increments), first=first, count=count)
+    return Times(
+        place=place,
+        axis=_axis(table, stamps, first, place, quanta, increments),
+        first=first,
+        count=count,
+        unit_assumed=assumed,
+    )
 
 
 def _refuse_other_names(table: NumberTable, places: Sequence[int]) -> None:
@@ -247,13 +261,26 @@ def _counted_times(table: NumberTable, place: int | None) -> Times:
     return Times(place=place, axis=axis, first=first, count=count)
 
 
-def _time_scale(table: NumberTable, place: int) -> float:
-    """Seconds in one unit of a column of times."""
+def _time_scale(table: NumberTable, place: int, told: float | None) -> tuple[float, bool]:
+    """Seconds in one unit of a column of times, and whether that was assumed.
+
+    The heading says it, else the user, else a sample interval that the file states with its unit, else the numbers: exponents
+    are what scopes write seconds with, plain decimals may be anything.
+    """
     unit = table.layout.columns[place].unit or table.axis_unit(Dimension.TIME)
     if unit is not None:
-        return unit.scale
+        if told is not None and abs(told / unit.scale - 1) > 1e-9:
+            raise CaptureError(
+                "the unit of the time is given twice and differs", where=f"{table.heading}, {table.called(place)}",
+                found=f"{unit.text} in the file, {told:g} s with --channels",
+            )  # fmt: skip
+        return unit.scale, False
+    if told is not None:
+        return told, False
     column = table.values[:, place][np.isfinite(table.values[:, place])]
     step = float(column[-1] - column[0]) / (column.size - 1)
+    if (scale := _scale_of_stated_step(table, step)) is not None:
+        return scale, False
     whole = bool(np.all(column == np.round(column)))
     if whole or step >= LONGEST_BARE_STEP_S:
         raise CaptureError(
@@ -261,9 +288,21 @@ def _time_scale(table: NumberTable, place: int) -> float:
             where=f"{table.heading}, {table.called(place)}",
             found=f"steps of {step:g}",
             wanted=f"a stated unit, or steps below {LONGEST_BARE_STEP_S:g} s",
-            mend="write the unit in the heading, such as time (us)",
+            mend="write the unit in the heading, such as time (us), or state it with --channels time=us",
         )
-    return 1.0
+    plain = not any("e" in row[place].casefold() for row in table.layout.sample_rows)
+    return 1.0, plain
+
+
+def _scale_of_stated_step(table: NumberTable, step: float) -> float | None:
+    """Seconds in one unit of the times, from a sample interval that the file names; `None` where it names none, or several."""
+    stated = stated_steps(table.layout.settings, only_named=True)
+    if len(stated) != 1 or step <= 0:
+        return None
+    for scale in (1.0, 1e-3, 1e-6, 1e-9):
+        if abs(step * scale / stated[0] - 1) < _SAME_STEP_RATIO:
+            return scale
+    return None
 
 
 def _quanta(table: NumberTable, place: int, stamps: FloatArray) -> FloatArray:
