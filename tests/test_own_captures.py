@@ -220,13 +220,13 @@ class TestWriting:
             raise OSError(28, "No space left on device")
 
         monkeypatch.setattr(os, "fsync", full)
-        with pytest.raises(InputError, match=r"x\.csv: the capture cannot be written; found No space left on device"):
+        with pytest.raises(InputError, match=r"x\.csv: the file cannot be written; found No space left on device"):
             write_capture(Capture(name="x", outputs={1: wave([0.3, 0.4])}), path)
         assert path.read_bytes() == before
         assert [file.name for file in tmp_path.iterdir()] == ["x.csv"]
 
     def test_a_folder_that_is_not_there(self, tmp_path: Path) -> None:
-        with pytest.raises(InputError, match=r"the capture cannot be written; found No such file"):
+        with pytest.raises(InputError, match=r"the file cannot be written; found No such file"):
             write_capture(Capture(name="x", outputs={1: wave([0.1, 0.2])}), tmp_path / "none" / "x.csv")
 
     def test_channels_with_different_times_are_refused(self) -> None:

@@ -2,12 +2,11 @@
 
 from __future__ import annotations
 
-import os
-import uuid
 from pathlib import Path
 
 from darkedge.analysis.captures import Capture
 from darkedge.analysis.errors import CaptureError, InputError
+from darkedge.analysis.files.atomic import write_atomic
 from darkedge.analysis.files.foreign import parse_foreign
 from darkedge.analysis.files.own_capture import is_own, parse_capture, print_capture
 from darkedge.analysis.files.roles import ChannelRoles
@@ -54,8 +53,6 @@ def read_capture(path: Path, *, name: str | None = None, channels: ChannelRoles 
 def write_capture(capture: Capture, path: Path) -> None:
     """Write a capture as a capture file of darkedge; the file is there whole or not at all.
 
-    It is written beside its place under a hidden name, flushed to the disk, then renamed.
-
     Raises
     ------
     CaptureError
@@ -63,17 +60,4 @@ def write_capture(capture: Capture, path: Path) -> None:
     InputError
         The file cannot be written.
     """
-    text = print_capture(capture)
-    beside = path.with_name(f".{path.name}.{uuid.uuid4().hex}.part")
-    try:
-        with beside.open("x", encoding="utf-8", newline="\n") as stream:
-            stream.write(text)
-            stream.flush()
-            os.fsync(stream.fileno())
-        beside.replace(path)
-    except OSError as error:
-        beside.unlink(missing_ok=True)
-        raise InputError(
-            "the capture cannot be written", where=str(path), found=error.strerror or str(error),
-            mend="check folder, permission and free space",
-        ) from error  # fmt: skip
+    write_atomic(path, print_capture(capture))
