@@ -125,7 +125,12 @@ def heard_in(path: Path | None) -> Iterator[Callable[[str, str], None]]:
     try:
         stream = path.open("a", encoding="utf-8")
     except OSError as error:
-        raise InputError("the log cannot be written", where=str(path), found=error.strerror or "") from error
+        raise InputError(
+            "the log cannot be written",
+            where=f"--log {path}",
+            found=error.strerror or "",
+            mend="give a file in a folder that is there",
+        ) from error
     with stream:
         yield lambda role, text: _keep(stream, role, text)
 

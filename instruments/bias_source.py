@@ -180,12 +180,16 @@ class SupplyBias(SwitchedBias):
         RefusedByInstrument, LinkError
             It cannot be said to be off.
         """
-        (level,) = self.session.settle([Setting(what=BIAS["level"], value=0.0)])
-        (output,) = self.session.settle([Setting(what=BIAS["output"], value="off")])
+        off, zero = Setting(what=BIAS["output"], value="off"), Setting(what=BIAS["level"], value=0.0)
+        self.session.fire(off)
+        self.session.fire(zero)
+        output, level = self.session.settle([off, zero])
         self.level_V = 0.0
         still_up = isinstance(level.value, float) and level.value >= DISCHARGED_V
-        if output.value == "on" and (still_up or output.read_back):
-            raise RefusedByInstrument("the supply does not switch off", where="bias")
+        if output.value == "on" or (still_up and output.value is None):
+            raise RefusedByInstrument(
+                "the supply says that its output is on", where=self.session.transport.address, wanted="output off"
+            )
 
     def _set(self, level_V: float) -> float:
         return _really(self.session, BIAS["level"], level_V, 1)
@@ -221,9 +225,10 @@ class GeneratorBias(SwitchedBias):
         self._switch("on")
 
     def off(self) -> None:
-        """Level zero and output off."""
-        self.level_V = self._set(0.0)
+        """Output off and level zero."""
+        self.generator.session.fire(Setting(what=GENERATOR["output"], value="off", channel=self.channel))
         self._switch("off")
+        self.level_V = self._set(0.0)
 
     def _switch(self, to: str) -> None:
         setting = Setting(what=GENERATOR["output"], value=to, channel=self.channel)
@@ -300,8 +305,9 @@ def _really(session: ScpiSession, what: Operation, level_V: float, channel: int)
         raise LinkError("the level cannot be read back", where=str(what), found=str(level.value))
     if abs(level.value - level_V) > READ_RATIO * abs(level_V) + READ_ROOM_V:
         raise RefusedByInstrument(
-            "another level was set than asked for", where=str(what), found=f"{level.value:g} V", wanted=f"{level_V:g} V"
-        )
+            "another level was set than asked for", where=f"{session.transport.address}, {what}", found=f"{level.value:g} V",
+            wanted=f"{level_V:g} V", mend="check the limits of the source, and scale and get of this operation in its dialect",
+        )  # fmt: skip
     return level.value
 
 

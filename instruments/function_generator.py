@@ -121,9 +121,16 @@ class GeneratorDriver:
             It cannot be said that all are off.
         """
         channels = self.link.emitter_channels
-        found = self.session.settle([Setting(what=GENERATOR["output"], value="off", channel=c) for c in channels])
-        if any(output.value == "on" for output in found):
-            raise RefusedByInstrument("an output does not switch off", where="function generator")
+        settings = [Setting(what=GENERATOR["output"], value="off", channel=c) for c in channels]
+        for setting in settings:
+            self.session.fire(setting)
+        found = self.session.settle(settings)
+        still_on = [str(channel) for channel, output in zip(channels, found, strict=True) if output.value == "on"]
+        if still_on:
+            raise RefusedByInstrument(
+                f"the function generator says that output {', '.join(still_on)} is on", where=self.session.transport.address,
+                wanted="off",
+            )  # fmt: skip
         self.may_be_on = False
 
     def set_time(self, channel: int, width_s: float, period_s: float) -> None:

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from darkedge.analysis.bench import Bench, BiasLink, BiasSource
-from darkedge.analysis.errors import BenchFileError, DarkedgeError, LinkError
+from darkedge.analysis.errors import BenchError, BenchFileError, DarkedgeError, LinkError
 from darkedge.analysis.plan import Plan
 from darkedge.instruments.bias_source import BiasByHand, GeneratorBias, SupplyBias
 from darkedge.instruments.bias_source import BiasSource as BiasDriver
@@ -62,6 +62,7 @@ class LiveBench:
     switch: LoadSwitchDriver | None
     sessions: dict[str, ScpiSession]
     identities: tuple[Identity, ...]
+    off_for_sure: bool = False
 
     def make_safe(self) -> list[str]:
         """Switch off everything that can be, each by itself, by a fresh link where the old one is gone; never raises.
@@ -69,7 +70,8 @@ class LiveBench:
         Returns
         -------
         list of str
-            What could not be switched off, in words for the person at the bench.
+            What could not be switched off, in words for the person at the bench. `off_for_sure` says whether everything that can be
+            switched is known to be off.
         """
         left_on: list[str] = []
         for name, session, off in (
@@ -78,7 +80,9 @@ class LiveBench:
         ):
             trouble = _try_off(session, off)
             if trouble:
-                left_on.append(f"{name} could not be switched off ({trouble}): switch it off by hand")
+                where = session.transport.address
+                left_on.append(f"{name} ({where}) may still be on ({trouble}): switch it off by hand, and check")
+        self.off_for_sure = not left_on
         if not self.bias.switchable:
             left_on.append("the rail is set by hand: switch it off, and check it with a meter")
         self.oscilloscope.stop()
@@ -133,6 +137,8 @@ def open_bench(
         The bench file does not fit the plan, or a dialect is wrong; nothing was opened.
     LinkError
         An instrument does not answer.
+    BenchError
+        All went well, but at the end an output could not be said to be off.
     """
     clock = clock or Time()
     check_fit(bench, plan)
@@ -162,6 +168,10 @@ def open_bench(
                 left_on(live.make_safe())
             for session in sessions.values():
                 session.transport.close()
+    if live is not None and not live.off_for_sure:
+        raise BenchError(
+            "an output may still be on", where="bench", mend="switch it off by hand; what was taken is safe"
+        )
 
 
 def roles(bench: Bench) -> dict[str, tuple[str, str]]:

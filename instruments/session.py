@@ -94,6 +94,10 @@ class ScpiSession:
         self._drain()
         return [self._read_back(setting) for setting in settings]
 
+    def fire(self, setting: Setting) -> None:
+        """Send a setting and listen to nothing: for the way out, where an answer may never come."""
+        self._send_all(self.dialect.messages(setting.what, setting.value, channel=setting.channel))
+
     def act(self, what: Operation, *, channel: int = 1, checked: bool = True) -> None:
         """Do something that has no value; nothing where it is absent."""
         self._send_all(self.dialect.messages(what, channel=channel))

@@ -173,7 +173,9 @@ class VisaTransport:
                 what,
                 where=self.address,
                 found=f"{message!r}, then {_first_line(error)}",
-                mend="check that the instrument is on and that its dialect knows this message" if late else "",
+                mend="check that the instrument is on and the link up, and that its dialect knows this message"
+                if late
+                else "",
             ) from error
         except (ValueError, UnicodeDecodeError) as error:
             raise LinkError(
@@ -213,4 +215,4 @@ def _ready(wire: socket.socket) -> None:
 
 def _first_line(error: BaseException) -> str:
     text = str(error).strip() or type(error).__name__
-    return text.splitlines()[0][:160]
+    return text.splitlines()[0][:160].rstrip(". ")

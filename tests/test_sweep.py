@@ -359,7 +359,7 @@ def test_what_cannot_be_switched_off_is_said(table: Desk) -> None:
     with pytest.raises(BenchError):
         _with_short_limits(table, bench, die)
     assert table.left_on is not None
-    assert any("the bias could not be switched off" in words for words in table.left_on)
+    assert any("the bias (TCPIP" in words for words in table.left_on)
     assert not any(drive.on for drive in table.virtual.world.drives)
 
 
@@ -368,6 +368,29 @@ def _with_short_limits(table: Desk, bench: object, die: object) -> None:
         patch.setattr("darkedge.instruments.visa.ANSWER_LIMIT_s", 0.3)
         patch.setattr("darkedge.instruments.visa.OPEN_LIMIT_s", 0.3)
         table.run(table.plan(plan_text(biases="[1, 5]")), bench=bench, progress=die)  # type: ignore[arg-type]
+
+
+@pytest.mark.parametrize(("role", "pattern", "name"), [
+    ("function_generator", "OUTPut#[:STATe]", "the emitter drive"), ("bias", "OUTPut[:STATe]", "the bias"),
+])  # fmt: skip
+def test_an_output_that_stays_on_is_the_benchs_failure_even_where_all_else_went_well(
+    table: Desk, role: str, pattern: str, name: str
+) -> None:
+    world, instrument = table.virtual.world, table.virtual.instruments[role]
+
+    def only_on(call: object) -> None:
+        if call.only().upper() == "ON":
+            (world.drives[0] if role != "bias" else world.rail).on = True
+
+    def break_it(progress: Progress) -> None:
+        if progress.step is None:
+            override(instrument, pattern, only_on)
+
+    with pytest.raises(BenchError, match=r"bench: an output may still be on"):
+        table.run(table.plan(plan_text()), progress=break_it)
+    assert table.left_on is not None
+    assert any(words.startswith(name) and "may still be on" in words for words in table.left_on)
+    assert len(read_journal(table.folder / "SP-2-01" / "journal.csv")) == 1
 
 
 @pytest.mark.skipif(os.name == "nt", reason="there is no SIGTERM to send there")

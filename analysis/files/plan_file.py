@@ -47,7 +47,7 @@ def _read_axis(value: object, info: ValidationInfo) -> tuple[float, ...]:
                 mend=f"write {-number:g}",
             )
         if number < 0 or (number == 0 and key != "bias_V"):
-            raise fault(f"{key}[{place}] is not positive", found=f"{number:g}")
+            raise fault(f"{key}[{place}] is not positive", found=f"{number:g}", wanted="a value above zero")
     if len(set(numbers)) < len(numbers):
         raise fault(f"{key} holds a value twice", mend="use repeats to measure a point more than once")
     return tuple(numbers)
@@ -61,7 +61,7 @@ def _spaced(stated: dict[str, object], key: str) -> list[float]:
     low, high = (_quantity(stated[end], key, f"{key}.{end}") for end in ("from", "to"))
     points, spacing = stated["points"], stated.get("spacing", "linear")
     if not isinstance(points, int) or isinstance(points, bool) or not 1 <= points <= MOST_POINTS:
-        raise fault(f"{key}.points is not a number of points", found=repr(points))
+        raise fault(f"{key}.points is not a number of points", found=repr(points), wanted=f"1 to {MOST_POINTS}")
     if spacing not in ("linear", "log"):
         raise fault(f"{key}.spacing is unknown", found=repr(spacing), wanted="linear or log")
     if spacing == "log" and (low <= 0 or high <= 0):
