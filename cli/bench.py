@@ -125,7 +125,7 @@ def serve(
 
     darkedge bench serve --save bench.toml
     """
-    from darkedge.analysis.files.atomic import write_atomic
+    from darkedge.analysis.files.atomic import make_folder, write_atomic
     from darkedge.instruments.virtual.rehearsal import OWN_WORDS, OWN_WORDS_NAME, serve_part
 
     with serve_part(kind, fault=fault, seed=seed, words=words, port=port) as served:
@@ -134,6 +134,7 @@ def serve(
         )
         text = served.bench_toml(dialects=dialects, switched=True)
         if save is not None:
+            make_folder(save.parent)
             write_atomic(save, text)
             if words == "own":
                 write_atomic(save.parent / OWN_WORDS_NAME, OWN_WORDS.read_bytes())

@@ -158,6 +158,8 @@ def test_a_plan_that_the_bench_cannot_do_has_its_own_status(table: Desk) -> None
         ("bias_V = [5]", "bias_V = [5]\nbiass_V = 3", r"unknown key; did you mean bias_V\?"),
         ('emitter_current_A = "5 mA"', 'emitter_current_A = "5 A"', r"beyond ratings\.emitter_peak_current_A"),
         ("duty = 0.1", "duty = 0.1\nlow_V = -3", r"emitter_reverse_V: missing"),
+        ("duty = 0.1", "duty = 0.1\nlow_V = 5", r"drive\.low_V: not below emitter\.forward_V"),
+        ("load_change", "element = [1, 1]\nload_change", r"axes\.element: holds an element twice"),
     ],
 )
 def test_a_plan_that_is_wrong_drives_nothing(table: Desk, old: str, new: str, words: str) -> None:

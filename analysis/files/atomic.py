@@ -34,3 +34,17 @@ def write_atomic(path: Path, content: str | bytes) -> None:
             found=error.strerror or str(error),
             mend="check folder, permission and space",
         ) from error
+
+
+def make_folder(folder: Path) -> None:
+    """Make a folder and those above it, where they are not there.
+
+    Raises
+    ------
+    InputError
+        It cannot be made.
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise InputError("the folder cannot be made", where=str(folder), found=error.strerror or str(error)) from error

@@ -221,6 +221,13 @@ def _drive_faults(stated: _Plan) -> list[str]:
         for place, element in enumerate(axes.element)
         if element not in elements
     ]
+    if len(set(axes.element)) < len(axes.element):
+        faults.append("axes.element: holds an element twice; use repeats to measure a point more than once")
+    if drive.low_V >= stated.emitter.forward_V:
+        faults.append(
+            f"drive.low_V: not below emitter.forward_V, so the emitter would never go dark; found {drive.low_V:g} V, "
+            f"wanted below {stated.emitter.forward_V:g} V"
+        )
     if len(axes.load_ohm) > 1 and axes.load_change == "fixed":
         faults.append('axes.load_change: "fixed" with more than one load; wanted "ask" or "switched"')
     elif stated.dark is not None and axes.load_change == "fixed" and stated.dark.load_ohm not in axes.load_ohm:

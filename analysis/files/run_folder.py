@@ -14,7 +14,7 @@ from pathlib import Path
 
 from darkedge.analysis.captures import Capture, Kind
 from darkedge.analysis.errors import FixtureError, InputError, PlanError
-from darkedge.analysis.files.atomic import write_atomic
+from darkedge.analysis.files.atomic import make_folder, write_atomic
 from darkedge.analysis.files.captures import write_capture
 from darkedge.analysis.files.plan_file import read_plan
 from darkedge.analysis.plan import Plan
@@ -83,10 +83,7 @@ class RunFolder:
         """
         cls.check_new(folder, plan)
         copies = _fixture_files(plan)
-        try:
-            (folder / CAPTURES).mkdir(parents=True, exist_ok=True)
-        except OSError as error:
-            raise InputError("the folder cannot be made", where=str(folder), found=error.strerror or "") from error
+        make_folder(folder / CAPTURES)
         for source, name in copies:
             (folder / name).parent.mkdir(parents=True, exist_ok=True)
             write_atomic(folder / name, source.read_bytes())

@@ -10,8 +10,7 @@ from pathlib import Path
 
 from matplotlib.figure import Figure
 
-from darkedge.analysis.errors import InputError
-from darkedge.analysis.files.atomic import write_atomic
+from darkedge.analysis.files.atomic import make_folder, write_atomic
 from darkedge.analysis.pictures.style import look
 
 DPI = 220
@@ -26,10 +25,7 @@ def save_png(figure: Figure, folder: Path, name: str) -> Path:
     InputError
         The folder cannot be made or written to.
     """
-    try:
-        folder.mkdir(parents=True, exist_ok=True)
-    except OSError as error:
-        raise InputError("the folder cannot be made", where=str(folder), found=error.strerror or "") from error
+    make_folder(folder)
     path = folder / f"{safe_name(name)}.png"
     write_atomic(path, _drawn(figure, format="png", dpi=DPI))
     return path
