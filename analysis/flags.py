@@ -170,6 +170,11 @@ _ALL = (
         mend="Take offset traces at zero bias with the same load and range, between the dark traces; check the channel's polarity.",
     ),
     Flag(
+        code="threshold_missed",
+        sentence="The output does not clearly pass the stated threshold; delays and widths there are left out.",
+        mend="State a threshold between the output's levels, or raise the light.",
+    ),
+    Flag(
         code="time_unit_assumed",
         sentence="The file states no unit of time; the numbers were read as seconds.",
         mend="Write the unit in the heading, such as time (us), or state it with --channels time=us.",

@@ -14,6 +14,7 @@ from darkedge.analysis.errors import DarkedgeError
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.waveform.measure import measure_pulse_capture
+from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels
 
 FixtureFor = Callable[[str], Fixture]
 """Gives the fixture that holds for a capture, by the capture's name."""
@@ -60,6 +61,7 @@ def measure_captures(
     *,
     fixture_for: FixtureFor = lambda _name: UNKNOWN_FIXTURE,
     today: date | None = None,
+    reference: ReferenceLevels = TEN_FIFTY_NINETY,
 ) -> tuple[list[Measurement], list[Failure]]:
     """Measure many captures; never raises for one of them.
 
@@ -76,6 +78,8 @@ def measure_captures(
     today : date, optional
         A fixture that had expired when a capture was taken is flagged; this day stands in for captures that do not say
         when they were taken.
+    reference : ReferenceLevels
+        Where the instants of pulses are taken.
 
     Returns
     -------
@@ -89,14 +93,16 @@ def measure_captures(
     failures: list[Failure] = []
     for capture in captures:
         try:
-            found.extend(measure_one(capture, fixture_for(capture.name)))
+            found.extend(measure_one(capture, fixture_for(capture.name), reference))
         except DarkedgeError as error:
             failures.append(Failure(capture=capture.name, error=error))
             found.append(refused_measurement(capture.name))
     return finish_measuring(found, fixture_for=fixture_for, today=today), failures
 
 
-def measure_one(capture: Capture, fixture: Fixture) -> Sequence[Measurement | StillTrace]:
+def measure_one(
+    capture: Capture, fixture: Fixture, reference: ReferenceLevels = TEN_FIFTY_NINETY
+) -> Sequence[Measurement | StillTrace]:
     """Measure one capture as far as it goes by itself: a still trace waits for the offset traces of its run.
 
     Raises
@@ -106,7 +112,7 @@ def measure_one(capture: Capture, fixture: Fixture) -> Sequence[Measurement | St
     """
     if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
         return _summaries(capture)
-    return measure_pulse_capture(capture, fixture=fixture)
+    return measure_pulse_capture(capture, fixture=fixture, reference=reference)
 
 
 def finish_measuring(

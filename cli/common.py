@@ -18,6 +18,7 @@ if TYPE_CHECKING:  # heavy: a command that only prints its help must not load th
     from matplotlib.figure import Figure
 
     from darkedge.analysis.files.intake import Intake
+    from darkedge.analysis.waveform.reference import ReferenceLevels
     from darkedge.cli.listing import Listing
 
 P = ParamSpec("P")
@@ -103,12 +104,14 @@ def take_in_paths(
     fixture: Path | None,
     channels: str | None,
     jobs: int = 1,
+    reference: ReferenceLevels | None = None,
 ) -> Intake:
     """Read and measure what the paths hold, with a progress bar, and tell what was refused."""
     from rich.console import Console
     from rich.progress import Progress
 
     from darkedge.analysis.files.intake import take_in
+    from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY
 
     progress = Progress(console=Console(stderr=True), transient=True)
     task = progress.add_task("measuring", total=None)
@@ -126,6 +129,7 @@ def take_in_paths(
             channels=channels,
             today=datetime.now(UTC).date(),
             jobs=jobs,
+            reference=reference or TEN_FIFTY_NINETY,
             progress=tell,
         )
     finally:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
 
@@ -20,6 +20,9 @@ from darkedge.cli.common import (
     say,
     take_in_paths,
 )
+
+if TYPE_CHECKING:
+    from darkedge.analysis.waveform.reference import ReferenceLevels
 
 Out = Annotated[
     Path | None,
@@ -43,6 +46,24 @@ def measure(
     channels: Channels = None,
     out: Out = None,
     jobs: Jobs = 1,
+    levels: Annotated[
+        str | None,
+        typer.Option(
+            "--levels",
+            metavar="LIST",
+            help="Between which levels edges are timed: '20 %, 80 %'; else 10 and 90 %.",
+            show_default=False,
+        ),
+    ] = None,
+    threshold: Annotated[
+        str | None,
+        typer.Option(
+            "--threshold",
+            metavar="LIST",
+            help="Volts at which delays and widths of the output are taken: '1.4 V', or '2 V, 0.8 V' rising and falling; else 50 %.",
+            show_default=False,
+        ),
+    ] = None,
     explain: Annotated[
         bool, typer.Option("--explain", help="Show how each file was understood, and measure nothing more.")
     ] = False,
@@ -54,7 +75,15 @@ def measure(
 
     darkedge measure sample_captures/foreign --names '{device}_{bias_V}V_{load_ohm}ohm'
     """
-    intake = take_in_paths(paths, names=names, conditions=conditions, fixture=fixture, channels=channels, jobs=jobs)
+    intake = take_in_paths(
+        paths,
+        names=names,
+        conditions=conditions,
+        fixture=fixture,
+        channels=channels,
+        jobs=jobs,
+        reference=_reference(levels, threshold),
+    )
     from darkedge.analysis.files.tables import table_json, write_table
     from darkedge.cli.listing import flag_lines, measurement_listing, reading_listings
 
@@ -71,3 +100,24 @@ def measure(
         for line in flag_lines(intake.measurements):
             say(line)
     return intake.exit_status
+
+
+def _reference(levels: str | None, threshold: str | None) -> ReferenceLevels:
+    from darkedge.analysis.errors import InputError
+    from darkedge.analysis.quantities import parse_list
+    from darkedge.analysis.waveform.reference import ReferenceLevels
+
+    outer = parse_list(levels, "levels_ratio") if levels is not None else (0.1, 0.9)
+    fixed = parse_list(threshold, "threshold_V") if threshold is not None else ()
+    if len(outer) != 2:
+        raise InputError("wanted two levels", where="--levels", found=repr(levels), wanted="such as 20 %, 80 %")
+    if len(fixed) > 2 or (threshold is not None and not fixed):
+        raise InputError(
+            "wanted one voltage or two", where="--threshold", found=repr(threshold), wanted="1.4 V, or 2 V, 0.8 V"
+        )
+    return ReferenceLevels(
+        low_ratio=outer[0],
+        high_ratio=outer[1],
+        rising_V=fixed[0] if fixed else None,
+        falling_V=fixed[-1] if fixed else None,
+    )

@@ -28,6 +28,7 @@ from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.measuring import StillTrace, finish_measuring, measure_one, refused_measurement
 from darkedge.analysis.plan import Plan
 from darkedge.analysis.waveform.measure import measure_pulse_capture
+from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels
 
 Progress = Callable[[int, int], None]
 
@@ -74,6 +75,7 @@ def take_in(
     channels: str | None = None,
     today: date,
     jobs: int = 1,
+    reference: ReferenceLevels = TEN_FIFTY_NINETY,
     progress: Progress | None = None,
 ) -> Intake:
     """Read and measure everything under the paths.
@@ -91,6 +93,8 @@ def take_in(
         Tells an expired fixture where a capture does not say when it was taken.
     jobs : int
         Processes that read and measure. The result is the same, in the same order, for any number.
+    reference : ReferenceLevels
+        Where the instants of pulses are taken.
     progress : callable, optional
         Called with the captures done and the number of all.
 
@@ -112,7 +116,7 @@ def take_in(
             mend="give --names and --conditions with captures, or correct the table",
         )
     rows = [row for table in tables for row in read_table(table)]
-    reading = _Reading(find_captures(rest) if rest else [], pattern, stated, roles, given)
+    reading = _Reading(find_captures(rest) if rest else [], pattern, stated, roles, given, reference)
     if stated is not None:
         stated.check_against(list(reading.sources))
     found: list[Measurement | StillTrace] = []
@@ -240,7 +244,9 @@ class _Reading:
         stated: ConditionsTable | None,
         roles: ChannelRoles | None,
         given: Fixture | None,
+        reference: ReferenceLevels = TEN_FIFTY_NINETY,
     ) -> None:
+        self.reference = reference
         self.sources = {source.name: source for source in sources}
         self.pattern, self.stated, self.roles, self.given = pattern, stated, roles, given
         self.fixtures: dict[str, Fixture] = {}
@@ -268,7 +274,8 @@ class _Reading:
         try:
             if isinstance(item, Refusal):
                 raise item.error
-            return Taken(rows=tuple(measure_one(self._in_its_run(item), self.fixtures.get(name, UNKNOWN_FIXTURE))))
+            fixture = self.fixtures.get(name, UNKNOWN_FIXTURE)
+            return Taken(rows=tuple(measure_one(self._in_its_run(item), fixture, self.reference)))
         except DarkedgeError as error:
             named = error if isinstance(item, Refusal) else error.at(name)
             return Taken(rows=(refused_measurement(name),), refused=Refused(name=name, error=named))

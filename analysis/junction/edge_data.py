@@ -29,6 +29,7 @@ SPOILING_FLAGS = frozenset(
 )
 """Flags with which an edge time says nothing of the capacitance."""
 FEWEST_BIASES = 4
+TEN_NINETY_WORDS = "histogram 10/50/90 %"
 LOAD_RATIO = 4.0
 """Loads this far apart tell the RC part from what does not depend on the load (design of experiments by Fisher information)."""
 
@@ -85,6 +86,16 @@ def edge_data(measurements: Sequence[Measurement], fixture: Fixture) -> EdgeData
         )
     spoiled = Counter(flag for m in driven for flag in m.flags if flag in SPOILING_FLAGS)
     usable = [m for m in driven if not SPOILING_FLAGS & set(m.flags)]
+    if other := sorted(
+        {m.levels for m in usable if m.levels is not None and not m.levels.startswith(TEN_NINETY_WORDS)}
+    ):
+        raise FitError(
+            "the edges are not timed between 10 and 90 %",
+            where=where,
+            found=", ".join(other),
+            wanted="rise and fall times from 10 to 90 %",
+            mend="measure again without --levels",
+        )
     stated = [m for m in usable if m.conditions.bias_V is not None and m.conditions.load_ohm is not None]
     if not stated:
         raise FitError(

@@ -85,7 +85,7 @@ def measure_channel(
         signal,
         levels=refined.levels,
         changes=changes,
-        noise=_with_codes(refined.noise, step),
+        noise=with_codes(refined.noise, step),
         fractions=fractions,
     )
     return Channel(
@@ -150,6 +150,6 @@ def _is_drift(refined: Refined, changes: Changes) -> bool:
     return changes.index.size == 1 and not before.settled
 
 
-def _with_codes(noise: Noise, step_V: float) -> Noise:
+def with_codes(noise: Noise, step_V: float) -> Noise:
     """Noise of a sample on an edge, which is never less than the rounding to codes, step / sqrt(12)."""
     return replace(noise, sigma_V=max(noise.sigma_V, step_V / float(np.sqrt(12))))

@@ -18,7 +18,7 @@ from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
 from darkedge.analysis.waveform.channel import Channel, measure_channel
 from darkedge.analysis.waveform.crossings import ENOUGH_TO_FIT
-from darkedge.analysis.waveform.edges import IntArray
+from darkedge.analysis.waveform.edges import IntArray, Transitions
 from darkedge.analysis.waveform.flaws import trace_flags
 from darkedge.analysis.waveform.intervals import DRIVE, OUTPUT, Budget, Interval, level_uncertainties
 from darkedge.analysis.waveform.pulses import (
@@ -30,9 +30,9 @@ from darkedge.analysis.waveform.pulses import (
     time_delays,
     time_edges,
 )
+from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels, relocate
 from darkedge.analysis.waveform.switching import switching_times
 
-LEVELS = "histogram 10/50/90 %"
 BY_SHAPE, BY_POLYNOMIAL, BY_LINE = "edge shape", "local polynomial", "straight line"
 """How the edges were timed: fitted shape, shape with its residuals smoothed, or two samples and a straight line."""
 
@@ -61,7 +61,9 @@ _DIODES = (DeviceKind.PHOTODIODE, DeviceKind.PIN)
 _SWITCHES = (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
 
 
-def measure_pulse_capture(capture: Capture, *, fixture: Fixture = UNKNOWN_FIXTURE) -> tuple[Measurement, ...]:
+def measure_pulse_capture(
+    capture: Capture, *, fixture: Fixture = UNKNOWN_FIXTURE, reference: ReferenceLevels = TEN_FIFTY_NINETY
+) -> tuple[Measurement, ...]:
     """Measure every element of a pulse capture.
 
     Edge times are as the scope shows them: the bench's own response is still in them, and `bench_limited` says where
@@ -73,6 +75,8 @@ def measure_pulse_capture(capture: Capture, *, fixture: Fixture = UNKNOWN_FIXTUR
         Outputs by element, the drive where it was captured, and the conditions.
     fixture : Fixture
         What is known of the bench: skew, offset, gain, time base, loads, response.
+    reference : ReferenceLevels
+        Where the output's instants are taken.
 
     Returns
     -------
@@ -86,13 +90,18 @@ def measure_pulse_capture(capture: Capture, *, fixture: Fixture = UNKNOWN_FIXTUR
     step = capture.conditions.volts_per_code
     drive = measure_channel(capture.drive) if capture.drive is not None else None
     return tuple(
-        _measure_element(capture, element, drive, measure_channel(record, volts_per_code=step), fixture)
+        _measure_element(capture, element, drive, measure_channel(record, volts_per_code=step), fixture, reference)
         for element, record in sorted(capture.outputs.items())
     )
 
 
 def _measure_element(
-    capture: Capture, element: int, drive: Channel | None, channel: Channel | None, fixture: Fixture
+    capture: Capture,
+    element: int,
+    drive: Channel | None,
+    channel: Channel | None,
+    fixture: Fixture,
+    reference: ReferenceLevels,
 ) -> Measurement:
     record = capture.outputs[element]
     conditions = replace(capture.conditions, element=element)
@@ -102,18 +111,19 @@ def _measure_element(
     if channel is None:
         return Measurement(
             capture=capture.name, element=element, conditions=conditions, quantities=_hidden_amplitude(record, drive),
-            flags=(*flags, "no_pulse"), levels=LEVELS, n_pulses=0,
+            flags=(*flags, "no_pulse"), levels=reference.words, n_pulses=0,
         )  # fmt: skip
     pairing = _pairing(drive, channel, fixture)
     job = _Job(
         record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive, pairing=pairing,
+        reference=reference,
         period=_period(drive, channel, conditions),
     )  # fmt: skip
     quantities = job.levels() | job.times()
     flags |= job.flags(quantities)
     return Measurement(
         capture=capture.name, element=element, conditions=conditions, quantities=quantities, flags=tuple(flags),
-        levels=LEVELS, estimator=job.estimator(), n_pulses=job.n_pulses(),
+        levels=reference.words, estimator=job.estimator(), n_pulses=job.n_pulses(),
     )  # fmt: skip
 
 
@@ -139,6 +149,15 @@ class _Job:
     drive: Channel | None
     pairing: Pairing | None
     period: Estimate | None
+    reference: ReferenceLevels
+
+    def referred(self) -> Transitions | None:
+        """The output's instants at the levels asked for; `None` where a fixed threshold is not passed."""
+        if self.reference == TEN_FIFTY_NINETY:
+            return self.channel.transitions
+        fixture, levels = self.fixture, self.channel.levels
+        u_volts = float(np.hypot(fixture.u_offset_V, fixture.u_gain_ratio * max(abs(levels.low_V), abs(levels.high_V))))
+        return relocate(self.channel, self.record, self.reference, offset_V=fixture.offset_V, u_volts=u_volts)
 
     def edges(self) -> IntArray:
         """Output edges that count: those that answer the drive, all of them where there is none."""
@@ -231,18 +250,26 @@ class _Job:
     def times(self) -> dict[str, Estimate]:
         """Rise and fall, and what drive, period and polarity allow of delays, widths, duties and switching times."""
         budget, output, pairing = self.budget(), self.channel.transitions, self.pairing
-        found = time_edges(output, self.edges(), budget=budget)
+        referred = self.referred()
+        found = time_edges(self._outer() if referred is None else referred, self.edges(), budget=budget)
         skew = {"skew_s": self.fixture.channel_skew_s, "u_skew_s": self.fixture.u_channel_skew_s}
         light_high = self.light_high()
         if self.drive is not None and pairing is not None:
-            found |= time_delays(self.drive.transitions, output, pairing, budget=budget, **skew)
+            if referred is not None:
+                found |= time_delays(self.drive.transitions, referred, pairing, budget=budget, **skew)
             if light_high is not None and self.conditions.device_kind in _SWITCHES:
                 found |= switching_times(
                     self.drive.transitions, output, pairing, light_high=light_high, budget=budget, **skew
                 )
-        return found | self._widths(budget, light_high)
+        return found | self._widths(budget, light_high, referred)
 
-    def _widths(self, budget: Budget, light_high: bool | None) -> dict[str, Estimate]:
+    def _outer(self) -> Transitions:
+        """Instants at the outer levels asked for, the middle ones at half the amplitude."""
+        found = relocate(self.channel, self.record, replace(self.reference, rising_V=None, falling_V=None))
+        assert found is not None  # only a fixed threshold can be missed
+        return found
+
+    def _widths(self, budget: Budget, light_high: bool | None, output: Transitions | None) -> dict[str, Estimate]:
         """Widths of drive and output pulses, and the duties where the period is known."""
         period, pairing = self.period_s(), self.pairing
         means: dict[str, Interval] = {}
@@ -252,8 +279,7 @@ class _Job:
             drive = self.drive.transitions
             width = mean_width(drive, every, active_high=drive_high, channel=DRIVE, period_s=period)
             means |= {} if width is None else {"in": width}
-        if light_high is not None:
-            output = self.channel.transitions
+        if light_high is not None and output is not None:
             width = mean_width(output, self.edges(), active_high=light_high, channel=OUTPUT, period_s=period)
             means |= {} if width is None else {"out": width}
         found = {f"width_{side}_s": budget.estimate(mean) for side, mean in means.items()}
@@ -285,6 +311,8 @@ class _Job:
             found.add("period_unknown")
         if self.light_high() is None:
             found.add("conditions_missing")
+        if self.referred() is None:
+            found.add("threshold_missed")
         return found | self._bias_flags(quantities) | self._bench_flags(quantities)
 
     def _bias_flags(self, quantities: dict[str, Estimate]) -> set[str]:
