@@ -1,6 +1,7 @@
 """What is fitted from swept captures lies around what the virtual part was made with: over seeds, through plan, sockets and scope."""
 
 from collections import Counter
+from dataclasses import replace
 from datetime import date
 from pathlib import Path
 
@@ -10,6 +11,7 @@ from scipy.stats import binom
 
 from darkedge.analysis.explain import explain_devices
 from darkedge.analysis.files.intake import take_in
+from darkedge.analysis.fixture import Fixture
 from darkedge.instruments.virtual.lots import Fault, PartKind
 from darkedge.instruments.virtual.parts import Device
 from darkedge.instruments.virtual.rehearsal import Rehearsal, TEMPERATURE_degC, VirtualHands
@@ -29,14 +31,26 @@ def sweep_one(folder: Path, kind: PartKind, seed: int) -> Device:
     return device
 
 
-def count_inside(folder: Path, kind: PartKind, seeds: range) -> tuple[Counter[str], Counter[str]]:
+def without_stray(fixture: Fixture) -> Fixture:
+    """A bench whose stray capacitance nobody measured."""
+    return replace(fixture, loads=tuple(replace(load, stray_F=None, u_stray_F=None) for load in fixture.loads))
+
+
+def count_inside(
+    folder: Path, kind: PartKind, seeds: range, *, stray_known: bool = True
+) -> tuple[Counter[str], Counter[str]]:
     """How many fitted values there were, and how many lay inside their 95 % interval, by name."""
     tried: Counter[str] = Counter()
     inside: Counter[str] = Counter()
     for seed in seeds:
         device = sweep_one(folder / f"seed{seed}", kind, seed)
         intake = take_in([folder / f"seed{seed}" / "part"], today=date(2026, 3, 2))
-        (found,) = explain_devices(intake.measurements, fixture_for=intake.fixture_for).devices
+        (found,) = explain_devices(
+            intake.measurements,
+            fixture_for=lambda name: (
+                intake.fixture_for(name) if stray_known else without_stray(intake.fixture_for(name))
+            ),
+        ).devices
         junction = device.elements[0].junction
         assert found.junction is not None
         for name in PARAMETERS:
@@ -67,6 +81,20 @@ def test_fitted_values_lie_around_what_the_part_was_made_with(tmp_path: Path, ki
     tried, inside = count_inside(tmp_path, kind, range(11, 13))
     assert tried["c_j0_F"] == tried["grading"] == 2
     assert tried["dark_current_A"] >= 6
+    check(tried, inside)
+
+
+def test_without_the_stray_a_pin_tells_its_bend_and_says_what_it_cannot_tell(tmp_path: Path) -> None:
+    tried, inside = count_inside(tmp_path, PartKind.PIN, range(11, 13), stray_known=False)
+    assert set(tried) == {"full_depletion_V", "dark_current_A"}
+    assert tried["full_depletion_V"] == inside["full_depletion_V"] == 2
+
+
+@pytest.mark.campaign
+@pytest.mark.parametrize("kind", [PartKind.PHOTODIODE, PartKind.PIN])
+def test_without_the_stray_what_is_told_is_inside_over_many_seeds(tmp_path: Path, kind: PartKind) -> None:
+    tried, inside = count_inside(tmp_path, kind, range(200, 216), stray_known=False)
+    print({name: f"{inside[name]}/{tried[name]}" for name in tried})
     check(tried, inside)
 
 

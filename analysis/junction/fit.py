@@ -13,6 +13,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from iminuit import Minuit
+from numpy.typing import NDArray
 from scipy.optimize import least_squares
 
 from darkedge.analysis.captures import DeviceKind, FloatArray
@@ -34,6 +35,10 @@ _MODEL_FLOOR_RATIO = 0.002
 """What the chain of two poles leaves unsaid of an edge time; added to its u in quadrature."""
 _WORST_MISFIT = 0.10
 """Residuals beyond this, in the median, are no junction."""
+SCAN_POINTS = 25
+"""Values at which a full depletion voltage is held while the rest is fitted again."""
+CHI2_95, NORMAL_95 = 3.841, 1.960
+"""95 % points of chi-squared with one degree of freedom and, two-sided, of the normal distribution."""
 _PIN_GAIN = 6.0
 """By how much the corrected Akaike criterion must fall before a device is said to be fully depleted."""
 
@@ -350,14 +355,66 @@ class _Report:
     def _parameters(self, covariance: FloatArray) -> dict[str, Estimate]:
         wanted = [n for n in ("c_j0_F", "v_bi_V", "grading", "c_stray_F", "full_depletion_V") if n in self.layout.names]
         found = {}
-        for name, (low, high) in self._profiles(wanted).items():
+        # Where a junction is fully depleted and the stray is not known, C(V) is a bend between two flat parts: amplitude, bend and stray
+        # trade against each other in several valleys, and a profile that follows one of them is too narrow (measured: it covers half of
+        # what it claims). The bend itself is told by a scan; the rest is left out.
+        torn = self.layout.full_depletion and self.problem.stray_F is None
+        profiles = {"full_depletion_V": self._scanned_bend()} if torn else self._profiles(wanted)
+        for name, (low, high) in profiles.items():
             if low is None or high is None:
                 continue
             place = self.layout.place(name)
             value = math.exp(self.best[place])
-            u = value * math.sqrt(covariance[place, place])
+            u = value * (0.5 * (high - low) / NORMAL_95 if torn else math.sqrt(covariance[place, place]))
             found[name] = Estimate(value=value, u=u, lo95=math.exp(low), hi95=math.exp(high))
         return found
+
+    def _scanned_bend(self) -> tuple[float | None, float | None]:
+        """Ends of the 95 % interval of the logarithm of the full depletion voltage, by refitting all else at values held fixed.
+
+        The interval reaches to the first value on either side that is excluded; `None` where no such value lies within the biases measured.
+        """
+        place = self.layout.place("full_depletion_V")
+        low, high = self.problem.bounds()
+        grid = np.linspace(low[place], high[place], SCAN_POINTS)
+        free = np.arange(self.best.size) != place
+        start = self.best.copy()
+        allowed = []
+        order = np.argsort(np.abs(grid - self.best[place]))
+        ends: dict[bool, FloatArray] = {True: start, False: start}
+        for k in order:
+            above = bool(grid[k] >= self.best[place])
+            theta, cost = self._refitted(ends[above], place, float(grid[k]), free)
+            ends[above] = theta
+            allowed.append((float(grid[k]), cost))
+        least = min(self.cost, *(cost for _, cost in allowed))
+        excluded = [value for value, cost in allowed if (cost - least) / self.scale > CHI2_95]
+        below = [value for value in excluded if value < self.best[place]]
+        above_it = [value for value in excluded if value > self.best[place]]
+        inside = [value for value, cost in allowed if (cost - least) / self.scale <= CHI2_95]
+        lowest, highest = min([*inside, self.best[place]]), max([*inside, self.best[place]])
+        return (
+            max((value for value in below if value < lowest), default=None),
+            min((value for value in above_it if value > highest), default=None),
+        )
+
+    def _refitted(
+        self, start: FloatArray, place: int, value: float, free: NDArray[np.bool_]
+    ) -> tuple[FloatArray, float]:
+        """All parameters but one fitted again."""
+        low, high = self.problem.bounds()
+        theta = start.copy()
+        theta[place] = value
+
+        def residuals(some: FloatArray) -> FloatArray:
+            whole = theta.copy()
+            whole[free] = some
+            return self.problem.residuals(whole)
+
+        inside = np.clip(theta[free], low[free] + 1e-6, high[free] - 1e-6)
+        found = least_squares(residuals, inside, bounds=(low[free], high[free]), x_scale=0.1, max_nfev=60)
+        theta[free] = found.x
+        return theta, float(2 * found.cost)
 
     def _profiles(self, names: Sequence[str]) -> dict[str, tuple[float | None, float | None]]:
         """Ends of the 95 % profile-likelihood interval of each logarithm; `None` where an end is not reached."""
