@@ -45,12 +45,9 @@ def count_inside(
     for seed in seeds:
         device = sweep_one(folder / f"seed{seed}", kind, seed)
         intake = take_in([folder / f"seed{seed}" / "part"], today=date(2026, 3, 2))
-        (found,) = explain_devices(
-            intake.measurements,
-            fixture_for=lambda name: (
-                intake.fixture_for(name) if stray_known else without_stray(intake.fixture_for(name))
-            ),
-        ).devices
+        fixture = intake.fixture_for(intake.measurements[0].capture)
+        known = fixture if stray_known else without_stray(fixture)
+        (found,) = explain_devices(intake.measurements, fixture_for=lambda _name, known=known: known).devices
         junction = device.elements[0].junction
         assert found.junction is not None
         for name in PARAMETERS:
