@@ -16,13 +16,15 @@ class Estimate:
     """A value with its standard uncertainty, or, where only a bound is known, that bound.
 
     Either `value` and `u` are both given (finite, u >= 0), or both are `None` and `lo95` or `hi95` says
-    what is known with 95 % confidence.
+    what is known with 95 % confidence. `parts` are the standard uncertainties that `u` was put together from, in the same
+    unit and by name, where somebody asked for them.
     """
 
     value: float | None = None
     u: float | None = None
     lo95: float | None = None
     hi95: float | None = None
+    parts: Mapping[str, float] | None = field(default=None, compare=False)
 
     def __post_init__(self) -> None:
         if (self.value is None) != (self.u is None):

@@ -6,6 +6,7 @@ from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+from darkedge.analysis.captures import Kind
 from darkedge.analysis.columns import ALL_QUANTITIES
 from darkedge.analysis.decide.results import Choice, OperatingPoint, Screening
 from darkedge.analysis.explain import ExplainedDevice
@@ -21,7 +22,9 @@ from darkedge.analysis.pictures.words import (
     interval,
     limit_words,
 )
-from darkedge.analysis.quantities import format_quantity
+from darkedge.analysis.quantities import format_quantity, unit_of
+from darkedge.analysis.waveform.measure import measure_pulse_capture
+from darkedge.analysis.waveform.reference import ReferenceLevels
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -70,6 +73,40 @@ def reading_listings(intake: Intake) -> list[Listing]:
         rows += [["flags", ", ".join(capture.remarks)]] if capture.remarks else []
         found.append(Listing(title=name, columns=["", "what was understood"], rows=rows))
     return found
+
+
+def budget_listings(intake: Intake, *, reference: ReferenceLevels) -> list[Listing]:
+    """For each pulse capture and element, quantity by quantity, the parts that its standard uncertainty is put together from."""
+    refused = {refusal.name for refusal in intake.refusals}
+    found = []
+    for name in intake.sources:
+        if name in refused or intake.reread is None:
+            continue
+        capture = intake.reread(name)
+        if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
+            continue
+        rows = measure_pulse_capture(capture, fixture=intake.fixture_for(name), reference=reference, keep_parts=True)
+        found += [_budget(row, several=len(rows) > 1) for row in rows]
+    return found
+
+
+def _budget(row: Measurement, *, several: bool) -> Listing:
+    title = f"{row.capture}, element {row.element}" if several else row.capture
+    cells = [
+        [
+            QUANTITY_WORDS[quantity],
+            cell(estimate, quantity),
+            part,
+            format_quantity(float(f"{u:.2g}"), unit_of(quantity).symbol),
+            f"{100 * u**2 / (estimate.u or 1.0) ** 2:.0f} %",
+        ]
+        for quantity, estimate in row.quantities.items()
+        for part, u in sorted((estimate.parts or {}).items(), key=lambda item: -item[1])
+        if u > 0
+    ]
+    return Listing(
+        title=title, columns=["quantity", "value", "part", "standard uncertainty", "of the variance"], rows=cells
+    )
 
 
 def flag_lines(measurements: Sequence[Measurement]) -> list[str]:

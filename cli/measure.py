@@ -64,6 +64,9 @@ def measure(
             show_default=False,
         ),
     ] = None,
+    budget: Annotated[
+        bool, typer.Option("--budget", help="Show what the uncertainty of each quantity is put together from.")
+    ] = False,
     explain: Annotated[
         bool, typer.Option("--explain", help="Show how each file was understood, and measure nothing more.")
     ] = False,
@@ -85,12 +88,15 @@ def measure(
         reference=_reference(levels, threshold),
     )
     from darkedge.analysis.files.tables import table_json, write_table
-    from darkedge.cli.listing import flag_lines, measurement_listing, reading_listings
+    from darkedge.cli.listing import budget_listings, flag_lines, measurement_listing, reading_listings
 
     if out is not None:
         write_table(intake.measurements, out)
         say(f"table: {out}")
-    if explain:
+    if budget:
+        for listing in budget_listings(intake, reference=_reference(levels, threshold)):
+            print_listing(listing)
+    elif explain:
         for listing in reading_listings(intake):
             print_listing(listing)
     elif json:

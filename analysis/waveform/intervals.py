@@ -16,6 +16,7 @@ from darkedge.analysis.waveform.edges import IntArray, Transitions
 from darkedge.analysis.waveform.levels import StateLevels
 
 OUTPUT, DRIVE = 0, 1
+LEVEL_NAMES = ("output low level", "output high level", "drive low level", "drive high level")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -76,12 +77,21 @@ class Budget:
 
     u_levels_V: tuple[float, float, float, float]
     u_timebase_ratio: float = 0.0
+    keep_parts: bool = False
 
-    def estimate(self, interval: Interval, *, u_more_s: float = 0.0, scale: float = 1.0) -> Estimate:
-        """Put an interval's uncertainties together; `scale` turns seconds into what is asked for."""
+    def estimate(
+        self, interval: Interval, *, u_more_s: float = 0.0, more: str = "channel skew", scale: float = 1.0
+    ) -> Estimate:
+        """Put an interval's uncertainties together; `scale` turns seconds into what is asked for, `more` says what `u_more_s` is."""
         u_levels = interval.pull * np.asarray(self.u_levels_V)
         parts = (interval.u_noise_s, self.u_timebase_ratio * abs(interval.value_s), u_more_s, *u_levels)
-        return Estimate(value=interval.value_s * scale, u=float(np.sqrt(np.sum(np.square(parts)))) * abs(scale))
+        names = ("noise and sampling", "time base", more, *LEVEL_NAMES)
+        kept = {name: abs(float(part) * scale) for name, part in zip(names, parts, strict=True)}
+        return Estimate(
+            value=interval.value_s * scale,
+            u=float(np.sqrt(np.sum(np.square(parts)))) * abs(scale),
+            parts=kept if self.keep_parts else None,
+        )
 
 
 def level_uncertainties(output: StateLevels, drive: StateLevels | None) -> tuple[float, float, float, float]:

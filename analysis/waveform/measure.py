@@ -62,7 +62,11 @@ _SWITCHES = (DeviceKind.TRANSISTOR_SWITCH, DeviceKind.OPTOCOUPLER)
 
 
 def measure_pulse_capture(
-    capture: Capture, *, fixture: Fixture = UNKNOWN_FIXTURE, reference: ReferenceLevels = TEN_FIFTY_NINETY
+    capture: Capture,
+    *,
+    fixture: Fixture = UNKNOWN_FIXTURE,
+    reference: ReferenceLevels = TEN_FIFTY_NINETY,
+    keep_parts: bool = False,
 ) -> tuple[Measurement, ...]:
     """Measure every element of a pulse capture.
 
@@ -77,6 +81,8 @@ def measure_pulse_capture(
         What is known of the bench: skew, offset, gain, time base, loads, response.
     reference : ReferenceLevels
         Where the output's instants are taken.
+    keep_parts : bool
+        Keep with each estimate what its uncertainty was put together from.
 
     Returns
     -------
@@ -90,7 +96,15 @@ def measure_pulse_capture(
     step = capture.conditions.volts_per_code
     drive = measure_channel(capture.drive) if capture.drive is not None else None
     return tuple(
-        _measure_element(capture, element, drive, measure_channel(record, volts_per_code=step), fixture, reference)
+        _measure_element(
+            capture,
+            element,
+            drive,
+            measure_channel(record, volts_per_code=step),
+            fixture,
+            reference,
+            keep_parts=keep_parts,
+        )
         for element, record in sorted(capture.outputs.items())
     )
 
@@ -102,6 +116,8 @@ def _measure_element(
     channel: Channel | None,
     fixture: Fixture,
     reference: ReferenceLevels,
+    *,
+    keep_parts: bool,
 ) -> Measurement:
     record = capture.outputs[element]
     conditions = replace(capture.conditions, element=element)
@@ -117,6 +133,7 @@ def _measure_element(
     job = _Job(
         record=record, conditions=conditions, fixture=fixture, channel=channel, drive=drive, pairing=pairing,
         reference=reference,
+        keep_parts=keep_parts,
         period=_period(drive, channel, conditions),
     )  # fmt: skip
     quantities = job.levels() | job.times()
@@ -150,6 +167,7 @@ class _Job:
     pairing: Pairing | None
     period: Estimate | None
     reference: ReferenceLevels
+    keep_parts: bool = False
 
     def referred(self) -> Transitions | None:
         """The output's instants at the levels asked for; `None` where a fixed threshold is not passed."""
@@ -182,7 +200,9 @@ class _Job:
     def budget(self) -> Budget:
         drive = self.drive.levels if self.drive else None
         return Budget(
-            u_levels_V=level_uncertainties(self.channel.levels, drive), u_timebase_ratio=self.fixture.u_timebase_ratio
+            u_levels_V=level_uncertainties(self.channel.levels, drive),
+            u_timebase_ratio=self.fixture.u_timebase_ratio,
+            keep_parts=self.keep_parts,
         )
 
     def light_high(self) -> bool | None:
@@ -196,25 +216,33 @@ class _Job:
         """Levels less the scope's offset, the amplitude, and the photocurrent where the load is known."""
         levels, fixture = self.channel.levels, self.fixture
         amplitude, gain = levels.amplitude_V, fixture.u_gain_ratio
-        u_amplitude = float(np.hypot(levels.u_amplitude_V, gain * amplitude))
         found = {
-            name: Estimate(
-                value=level - fixture.offset_V, u=float(np.sqrt(u**2 + fixture.u_offset_V**2 + (gain * level) ** 2))
+            name: self._of_parts(
+                level - fixture.offset_V,
+                {"noise of the level": u, "offset of the scope": fixture.u_offset_V, "gain of the scope": gain * level},
             )
-            for name, level, u in (
-                ("low_V", levels.low_V, levels.u_low_V), ("high_V", levels.high_V, levels.u_high_V)
-            )
-        }  # fmt: skip
-        found["amplitude_V"] = Estimate(value=amplitude, u=u_amplitude)
+            for name, level, u in (("low_V", levels.low_V, levels.u_low_V), ("high_V", levels.high_V, levels.u_high_V))
+        }
+        parts = {"noise of both levels": levels.u_amplitude_V, "gain of the scope": gain * amplitude}
+        found["amplitude_V"] = self._of_parts(amplitude, parts)
         if self.conditions.device_kind in _DIODES and self.conditions.load_ohm:
             load = fixture.effective_load(self.conditions.load_ohm, self.conditions.input_ohm)
-            current = amplitude / (load.value or 1.0)
-            u = current * float(np.hypot(u_amplitude / amplitude, (load.u or 0.0) / (load.value or 1.0)))
-            found["photocurrent_A"] = Estimate(value=current, u=u)
+            resistance = load.value or 1.0
+            current = amplitude / resistance
+            of_current = {name: u / resistance for name, u in parts.items()}
+            found["photocurrent_A"] = self._of_parts(
+                current, of_current | {"load": current * (load.u or 0.0) / resistance}
+            )
         if self.conditions.output_connection == OutputConnection.PULL_UP and self.conditions.device_kind in _SWITCHES:
             found["output_low_V"] = found["low_V"]
         ratio = self._transfer_ratio(found)
         return found if ratio is None else found | {"current_transfer_ratio": ratio}
+
+    def _of_parts(self, value: float, parts: dict[str, float]) -> Estimate:
+        """A value whose uncertainty is put together from independent parts (JCGM 100:2008, 5.1.2)."""
+        u = float(np.sqrt(np.sum(np.square(list(parts.values())))))
+        kept = {name: abs(part) for name, part in parts.items()} if self.keep_parts else None
+        return Estimate(value=value, u=u, parts=kept)
 
     def _transfer_ratio(self, levels: dict[str, Estimate]) -> Estimate | None:
         """Collector current over emitter current of a coupler; only a lower bound where the output may be saturated.
@@ -293,7 +321,9 @@ class _Job:
         period = self.period
         whole, u_whole = (1.0, 0.0) if period is None else (period.value or 1.0, period.u or 0.0)
         ratio = replace(budget, u_timebase_ratio=0.0)
-        return ratio.estimate(interval, u_more_s=abs(interval.value_s) * u_whole / whole, scale=1 / whole)
+        return ratio.estimate(
+            interval, u_more_s=abs(interval.value_s) * u_whole / whole, more="period", scale=1 / whole
+        )
 
     def period_s(self) -> float | None:
         """Period of the pulses, `None` where it is neither in the capture nor stated."""
