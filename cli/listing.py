@@ -92,18 +92,13 @@ def budget_listings(intake: Intake, *, reference: ReferenceLevels) -> list[Listi
 
 def _budget(row: Measurement, *, several: bool) -> Listing:
     title = f"{row.capture}, element {row.element}" if several else row.capture
-    cells = [
-        [
-            QUANTITY_WORDS[quantity],
-            cell(estimate, quantity),
-            part,
-            format_quantity(float(f"{u:.2g}"), unit_of(quantity).symbol),
-            f"{100 * u**2 / (estimate.u or 1.0) ** 2:.0f} %",
-        ]
-        for quantity, estimate in row.quantities.items()
-        for part, u in sorted((estimate.parts or {}).items(), key=lambda item: -item[1])
-        if u > 0
-    ]
+    cells: list[list[str]] = []
+    for quantity, estimate in row.quantities.items():
+        parts = sorted(((u, part) for part, u in (estimate.parts or {}).items() if u > 0), reverse=True)
+        for place, (u, part) in enumerate(parts):
+            named = [QUANTITY_WORDS[quantity], cell(estimate, quantity)] if place == 0 else ["", ""]
+            share = f"{100 * u**2 / (estimate.u or 1.0) ** 2:.0f} %"
+            cells.append([*named, part, format_quantity(float(f"{u:.2g}"), unit_of(quantity).symbol), share])
     return Listing(
         title=title, columns=["quantity", "value", "part", "standard uncertainty", "of the variance"], rows=cells
     )
