@@ -82,6 +82,23 @@ def test_hand_work_is_asked_for_and_the_word_waited_for(table: Desk) -> None:
     assert "Cover the device" in said
 
 
+def test_a_rail_set_by_hand_is_asked_for_and_said_to_be_on_at_the_end(table: Desk) -> None:
+    text = (table.folder / "bench.toml").read_text()
+    start, rest = text.split("[bias]")
+    (table.folder / "bench.toml").write_text(
+        start + '[bias]\nsource = "by_hand"\n\n[switch]' + rest.split("[switch]", 1)[1]
+    )
+    table.virtual.world.bias_from = "hand"
+    path = plan(table, SWITCHED)
+    _, said = run("sweep", path, "--bench", "bench.toml", "--device", "S", typed="0\nabout 5\n5 V\n0.1 V\n5.02\n")
+    assert said.count("What does the meter read?") == 5
+    assert "not understood: bias_V is not a number" in said
+    assert "CAUTION: the rail is set by hand: switch it off, and check it with a meter" in said
+    assert "# bias_read_V = 5.02" in (table.folder / "S" / "captures" / "0002_pulse.csv").read_text()
+    _, said = run("sweep", path, "--bench", "bench.toml", "--device", "T", typed="4 V\n", status=2)
+    assert "the rail is still up; found 4 V; wanted below 2 V" in said
+
+
 @pytest.mark.parametrize("typed", ["", "stop\n", "no\n"])
 def test_hand_work_that_is_not_confirmed_ends_the_run(table: Desk, typed: str) -> None:
     _, said = run(
