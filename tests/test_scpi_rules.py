@@ -156,7 +156,7 @@ def test_a_full_queue_ends_in_queue_overflow_and_keeps_the_oldest(scope: Client)
 
 
 @pytest.mark.parametrize(
-    "header",
+    "header", ["SENSE:SWEEP:TIME", "SENS:SWE:TIME", "sens:swe:time", "Sweep:Time", "SWE:TIME", ":SWE:TIME"]
 )
 def test_long_and_short_forms_optional_nodes_and_case(scope: Client, header: str) -> None:
     """SCPI-1999 Volume 1, 6.2.1 and 6.2.5."""
