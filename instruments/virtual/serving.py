@@ -25,6 +25,11 @@ def actual_ohm(nominal_ohm: float) -> float:
     return nominal_ohm * ACTUAL_RATIO.get(nominal_ohm, 1.0)
 
 
+def _written(load_ohm: float) -> str:
+    """A load as people write it."""
+    return f"{load_ohm / 1e6:g} Mohm" if load_ohm >= 1e6 else f"{load_ohm / 1e3:g} kohm"
+
+
 class VirtualBench:
     """An oscilloscope, a two-channel generator, a supply and a load switch, each behind a socket of its own; a context manager.
 
@@ -112,5 +117,5 @@ class VirtualBench:
         ]  # fmt: skip
         if switched:
             lines += ["[switch]", *link("switch"), "[switch.loads]"]
-            lines += [f'"{load:g} ohm" = {place}' for place, load in enumerate(SWITCHED_OHM, start=1)] + [""]
+            lines += [f'"{_written(load)}" = {place}' for place, load in enumerate(SWITCHED_OHM, start=1)] + [""]
         return "\n".join(lines)
