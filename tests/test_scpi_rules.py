@@ -272,7 +272,21 @@ def test_two_clients_are_served_one_message_at_a_time(served: VirtualBench) -> N
 
 
 @pytest.mark.parametrize(
-    "rubbish", [b"\x00\xff\xfe\x80\n", b"\n\n\n", b";;;:;\n", b"*\n", b"?\n", b'"open\n', b"#9\n", b"#5abc\n", b"(@\n"]
+    "rubbish",
+    [
+        b"#\xb2\n",
+        b"SWE:TIME \xb2\n",
+        b"*ESE \xb9\n",
+        b"\x00\xff\xfe\x80\n",
+        b"\n\n\n",
+        b";;;:;\n",
+        b"*\n",
+        b"?\n",
+        b'"open\n',
+        b"#9\n",
+        b"#5abc\n",
+        b"(@\n",
+    ],
 )
 def test_rubbish_leaves_the_instrument_alive(scope: Client, rubbish: bytes) -> None:
     scope.send(rubbish)

@@ -127,7 +127,7 @@ class LoadSwitch(ScpiInstrument):
 
     def _place(self, call: Call) -> int:
         text = call.only().replace(" ", "")
-        if not (text.startswith("(@") and text.endswith(")") and text[2:-1].isdigit()):
+        if not (text.startswith("(@") and text.endswith(")") and text[2:-1].isascii() and text[2:-1].isdigit()):
             raise ScpiError(-102, text[:20])
         place = int(text[2:-1])
         if not 1 <= place <= len(self.loads_ohm):

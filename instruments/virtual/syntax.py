@@ -53,7 +53,7 @@ def _split(text: str, mark: str) -> list[str]:
         letter = text[place]
         if letter in "\"'":
             place = _string_end(text, place)
-        elif letter == "#" and text[place + 1 : place + 2].isdigit():
+        elif letter == "#" and _is_number(text[place + 1 : place + 2]):
             place = _block_end(text, place)
         elif letter == "(":
             closing = text.find(")", place)
@@ -81,12 +81,17 @@ def _string_end(text: str, start: int) -> int:
     raise ScpiError(-151, "missing end quote")
 
 
+def _is_number(text: str) -> bool:
+    """Whether a text is decimal digits and nothing else; `²` is a digit for Python only."""
+    return text.isascii() and text.isdigit()
+
+
 def _block_end(text: str, start: int) -> int:
     digits = int(text[start + 1])
     if digits == 0:
         return len(text)
     count = text[start + 2 : start + 2 + digits]
-    if len(count) != digits or not count.isdigit():
+    if len(count) != digits or not _is_number(count):
         raise ScpiError(-161)
     end = start + 2 + digits + int(count)
     if end > len(text):
