@@ -19,32 +19,27 @@ class _Handler(socketserver.StreamRequestHandler):
     server: _Server
 
     def handle(self) -> None:
-        self.request.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
         self.server.clients.add(self.request)
         try:
             self._converse()
+        except OSError:
+            return  # the client is gone; whoever it was, nobody waits for an answer
         finally:
             self.server.clients.discard(self.request)
 
     def _converse(self) -> None:
-        while True:
-            try:
-                line = self.rfile.readline(LINE_LIMIT)
-            except OSError:
-                return
-            if not line:
-                return
-            if not line.endswith(b"\n") and len(line) >= LINE_LIMIT:
+        self.request.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+        while line := self.rfile.readline(LINE_LIMIT):
+            if not line.endswith(b"\n"):
+                if len(line) < LINE_LIMIT:
+                    return  # broken off: the first half of a message may say something else than the whole
                 self._drop_rest()
                 with self.server.turn:
                     self.server.instrument.status.report(ScpiError(-363))
                 continue
             with self.server.turn:
                 reply = self.server.instrument.carry_out(line.decode("latin-1").strip("\r\n"))
-            try:
-                self.wfile.write(reply)
-            except OSError:
-                return
+            self.wfile.write(reply)
 
     def _drop_rest(self) -> None:
         while True:
@@ -55,6 +50,7 @@ class _Handler(socketserver.StreamRequestHandler):
 
 class _Server(socketserver.ThreadingTCPServer):
     allow_reuse_address = True
+    request_queue_size = 64  # with five, a client that comes in a crowd waits seconds for its connection
     daemon_threads = True
 
     def __init__(self, instrument: ScpiInstrument, port: int) -> None:
