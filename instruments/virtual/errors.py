@@ -18,6 +18,7 @@ STANDARD_TEXTS: dict[int, str] = {
     -113: "Undefined header",
     -114: "Header suffix out of range",
     -121: "Invalid character in number",
+    -123: "Exponent too large",
     -124: "Too many digits",
     -128: "Numeric data not allowed",
     -130: "Suffix error",

@@ -17,6 +17,8 @@ from darkedge.instruments.virtual.syntax import (
 )
 
 Reply = str | bytes | None
+NOT_FINITE = 9.9e37
+"""Numbers from here on stand for infinity or for not a number (SCPI-1999 Volume 1, 7.2.1.4 and 7.2.1.5)."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -99,20 +101,38 @@ class Range:
 
 
 def read_boolean(text: str) -> bool:
-    """`ON`, `OFF`, or a number that is rounded to an integer: zero is off (SCPI-1999 Volume 1, 7.3)."""
+    """`ON`, `OFF`, or a number that is rounded to an integer: zero is off (SCPI-1999 Volume 1, 7.3).
+
+    `NAN` and the infinities say neither, and must not switch anything on (-222).
+    """
     word = text.strip().upper()
     if word in ("ON", "OFF"):
         return word == "ON"
-    return round(parse_number(text)) != 0
+    value = parse_number(text)
+    if abs(value) >= NOT_FINITE:
+        raise ScpiError(-222, text[:20])
+    return round(value) != 0
 
 
 def read_choice(text: str, choices: Sequence[str]) -> str:
-    """One of the words of a pattern such as `POSitive`, in either form; the short form comes back. -224 else."""
+    """One of the words of a pattern such as `POSitive`, in either form; the short form comes back.
+
+    Raises
+    ------
+    ScpiError
+        -224 another word, -141 a word with a letter that no word has, -128 a number, -104 other data.
+    """
     word = text.strip().upper()
     for choice in choices:
         short = "".join(c for c in choice if c.isupper() or c.isdigit())
         if word in (choice.upper(), short):
             return short
+    if word[:1] in tuple("\"'#("):
+        raise ScpiError(-104, text[:20])
+    if word[:1] in tuple("+-.0123456789"):
+        raise ScpiError(-128, text[:20])
+    if not (word.isascii() and word.replace("_", "").isalnum()):
+        raise ScpiError(-141, text[:20])
     raise ScpiError(-224, text[:20])
 
 
@@ -186,10 +206,17 @@ class ScpiInstrument:
         """
         replies: list[bytes] = []
         path: tuple[str, ...] = ()
+        indefinite = False
         try:
             for text in split_units(message):
-                if text.strip():
-                    path = self._carry_out_unit(parse_unit(text), path, replies)
+                if not text.strip():
+                    continue
+                unit = parse_unit(text)
+                if unit.query and indefinite:
+                    raise ScpiError(-440)
+                path = self._carry_out_unit(unit, path, replies)
+                # the identity is arbitrary ASCII, which only the end of the message ends (IEEE 488.2, 8.7.11, 10.14)
+                indefinite = indefinite or (unit.common and unit.query and unit.nodes[0].upper() == "IDN")
         except ScpiError as error:
             self.status.report(error)
         except NeverDone:
@@ -200,7 +227,7 @@ class ScpiInstrument:
     def _carry_out_unit(self, unit: Unit, path: tuple[str, ...], replies: list[bytes]) -> tuple[str, ...]:
         """Find and run one unit; returns the path that the next unit is read from (SCPI-1999 Volume 1, 6.2.4)."""
         if unit.common:
-            reply = self._run(("*" + unit.nodes[0],), unit)
+            reply = self._run(("*" + unit.nodes[0], *unit.nodes[1:]), unit)
         else:
             written = unit.nodes if unit.absolute else (*path, *unit.nodes)
             reply = self._run(written, unit)

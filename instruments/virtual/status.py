@@ -54,7 +54,9 @@ class Status:
     def next_error(self) -> str:
         """Oldest entry of the queue, taken out; `0,"No error"` when it is empty."""
         number, text = self._queue.popleft() if self._queue else (0, STANDARD_TEXTS[0])
-        return f'{number},"{text}"'
+        shown = "".join(letter if letter.isascii() and letter.isprintable() else "?" for letter in text)
+        doubled = shown.replace('"', '""')  # a quote within a string (IEEE 488.2, 8.7.8)
+        return f'{number},"{doubled}"'
 
     def error_count(self) -> int:
         """Entries in the queue."""

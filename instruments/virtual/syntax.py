@@ -7,6 +7,7 @@ with unit suffixes, `#H #Q #B`, `MIN MAX DEF`, strings, and arbitrary blocks (IE
 
 from __future__ import annotations
 
+import math
 import re
 from dataclasses import dataclass
 from functools import cache
@@ -21,9 +22,12 @@ _MULTIPLIERS = {
     "P": 1e-12, "F": 1e-15, "A": 1e-18, "": 1.0,
 }  # fmt: skip
 _MEGA_UNITS = {"MHZ": 1e6, "MOHM": 1e6}  # the two exceptions where M is mega (IEEE 488.2, 7.7.3)
-_NUMBER = re.compile(r"[+-]?(?:\d+\.?\d*|\.\d+)(?:\s*[eE]\s*[+-]?\d+)?")
-_RADIX = {"H": 16, "Q": 8, "B": 2}
-_NODE = re.compile(r"(\*?[A-Za-z][A-Za-z_]*)(\d*)")
+_NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)(?:\s*[eE]\s*[+-]?(\d+))?", re.ASCII)
+_RADIX = {"H": (16, "0123456789ABCDEF"), "Q": (8, "01234567"), "B": (2, "01")}
+_NODE = re.compile(r"(\*?[A-Za-z][A-Za-z_]*)(\d*)", re.ASCII)
+_WHITE = "".join(chr(code) for code in range(33) if code != 10)  # IEEE 488.2, 7.4.1.2
+_HEADER_END = re.compile(f"[{re.escape(_WHITE)}]")
+_DIGIT_LIMIT, _EXPONENT_LIMIT = 255, 32000  # IEEE 488.2, 7.7.2.4.1
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -107,11 +111,7 @@ def parse_unit(text: str) -> Unit:
     ScpiError
         -101, -102 or -112 where the header is no header.
     """
-    stripped = text.strip()
-    header, _, rest = stripped.partition(" ") if " " in stripped else (stripped, "", "")
-    if "\t" in header:
-        header, _, tail = header.partition("\t")
-        rest = f"{tail} {rest}"
+    header, rest = [*_HEADER_END.split(text.strip(_WHITE), maxsplit=1), ""][:2]
     common = header.startswith("*")
     absolute = header.startswith(":")
     body = header[1:] if common or absolute else header
@@ -119,7 +119,7 @@ def parse_unit(text: str) -> Unit:
     nodes = tuple((body[:-1] if query else body).split(":"))
     for node in nodes:
         _check_node(node)
-    parameters = tuple(p.strip() for p in split_parameters(rest)) if rest.strip() else ()
+    parameters = tuple(p.strip(_WHITE) for p in split_parameters(rest)) if rest.strip(_WHITE) else ()
     if "" in parameters:
         raise ScpiError(-109 if parameters[-1] == "" else -103)
     return Unit(nodes=nodes, query=query, common=common, absolute=absolute, parameters=parameters)
@@ -129,8 +129,9 @@ def _check_node(node: str) -> None:
     if not node:
         raise ScpiError(-102, "empty node")
     match = _NODE.fullmatch(node)
-    if match is None:
-        raise ScpiError(-101 if not node.isascii() or not node.isprintable() else -102, node[:20])
+    if match is None or node.startswith("*"):
+        foreign = any(not (letter.isascii() and (letter.isalnum() or letter in "_?*")) for letter in node)
+        raise ScpiError(-101 if foreign else -102, node[:20])
     if len(match[1]) > MNEMONIC_LIMIT:
         raise ScpiError(-112, node[:20])
 
@@ -180,7 +181,7 @@ def _node_number(node: Node, written: str) -> int | None:
         return None
     if not match[2]:
         return 1
-    return int(match[2]) if node.numbered else None
+    return int(match[2].lstrip("0")[:9] or 0) if node.numbered else None  # nine digits are beyond any channel
 
 
 @cache
@@ -212,36 +213,48 @@ def parse_number(text: str, *, unit: str = "") -> float:
     Raises
     ------
     ScpiError
-        -104 not a number, -131 a suffix of another unit, -138 a suffix where none is allowed.
+        -104 not a number, -121 to -124 a number written wrongly, -131 a suffix of another unit, -138 a suffix
+        where none is allowed, -103 something else behind the number, -222 beyond what a number can hold.
     """
-    stripped = text.strip()
+    stripped = text.strip(_WHITE)
     if stripped[:1] == "#":
-        return float(_radix_number(stripped))
+        return _radix_number(stripped)
     named = {"INF": 9.9e37, "INFINITY": 9.9e37, "NINF": -9.9e37, "NAN": 9.91e37}.get(stripped.upper())
     if named is not None:
         return named
     match = _NUMBER.match(stripped)
     if match is None:
         raise ScpiError(-104, stripped[:20])
+    if len(match[1].replace(".", "").lstrip("0")) > _DIGIT_LIMIT:
+        raise ScpiError(-124)
+    exponent = (match[2] or "").lstrip("0")
+    if len(exponent) > 5 or int(exponent or 0) > _EXPONENT_LIMIT:
+        raise ScpiError(-123, stripped[:20])
     number = float(re.sub(r"\s", "", match[0]))
-    suffix = stripped[match.end() :].strip().upper()
-    if not suffix:
-        return number
-    if not suffix[0].isalpha():
-        raise ScpiError(-121, stripped[:20])
-    return number * _suffix_factor(suffix, unit)
+    behind = stripped[match.end() :]
+    suffix = behind.strip(_WHITE).upper()
+    if suffix:
+        if suffix[0] == ":" or (suffix[0].isdigit() and behind[0] in _WHITE):  # a `;` or `,` was forgotten
+            raise ScpiError(-103, stripped[:20])
+        if not (suffix[0].isascii() and suffix[0].isalpha()):
+            raise ScpiError(-121, stripped[:20])
+        number *= _suffix_factor(suffix, unit)
+    if not math.isfinite(number):
+        raise ScpiError(-222, stripped[:20])
+    return number
 
 
-def _radix_number(text: str) -> int:
-    base = _RADIX.get(text[1:2].upper())
+def _radix_number(text: str) -> float:
+    if text[1:2].upper() not in _RADIX:
+        raise ScpiError(-104, text[:20])
+    base, allowed = _RADIX[text[1].upper()]
+    digits = text[2:].upper()
+    if not digits or digits.strip(allowed):  # Python's own int() would take signs and underscores too
+        raise ScpiError(-121, text[:20])
     try:
-        return int(text[2:], base or 10) if base else _not_radix(text)
-    except ValueError:
-        raise ScpiError(-121, text[:20]) from None
-
-
-def _not_radix(text: str) -> int:
-    raise ScpiError(-104, text[:20])
+        return float(int(digits, base))
+    except OverflowError:
+        raise ScpiError(-222, text[:20]) from None
 
 
 def _suffix_factor(suffix: str, unit: str) -> float:
