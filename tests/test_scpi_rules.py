@@ -109,6 +109,7 @@ def test_an_instrument_that_was_just_switched_on_says_so() -> None:
         ("SWE:TIME", -109), ("SWE:TIME 1,2", -108), ("*IDN? 5", -108), ("SWE:TIME 1 V", -131), ("SWE:POIN 1 S", -138),
         ("SWE:TIME bogus", -104), ("SWE:TIME 1E3", -222), ("SWE:TIME -1", -222), ("INP1:COUP GND", -224),
         ("SENS7:VOLT:RANG:PTP 1", -114), ("TRAC? CH1", -230), ("TRIG:SLOP BOTH", -224), ("FORM REAL,7", -224),
+        ("FORM REAL,32,9", -108), ("TRIG:SOUR? 1", -108), ("INP1:COUP? 1", -108), ("FORM:BORD? 1", -108),
     ],
 )  # fmt: skip
 def test_each_mistake_has_its_number(scope: Client, message: str, number: int) -> None:

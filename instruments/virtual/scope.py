@@ -133,9 +133,9 @@ class Oscilloscope(ScpiInstrument):
             "impedance_ohm",
         )
         self.add("INPut#:COUPling", self._set_coupling)
-        self.add("INPut#:COUPling?", lambda call: self._channel(call).coupling)
+        self.add("INPut#:COUPling?", lambda call: self._text(call, lambda: self._channel(call).coupling))
         self.add("INPut#:FILTer[:LPASs][:STATe]", self._set_limit)
-        self.add("INPut#:FILTer[:LPASs][:STATe]?", lambda call: str(int(self._channel(call).limit_on)))
+        self.add("INPut#:FILTer[:LPASs][:STATe]?", lambda call: self._text(call, lambda: str(int(self._channel(call).limit_on))))
 
     def _add_timing_commands(self) -> None:
         def number(pattern: str, setting: Range, name: str, kind: type[int] | type[float]) -> None:
@@ -152,19 +152,19 @@ class Oscilloscope(ScpiInstrument):
         number("[SENSe:]AVERage:COUNt", _COUNT, "averages", int)
         number("TRIGger:LEVel", _LEVEL, "level_V", float)
         self.add("[SENSe:]AVERage[:STATe]", self._set_averaging)
-        self.add("[SENSe:]AVERage[:STATe]?", lambda _call: str(int(self.timing.averaging)))
+        self.add("[SENSe:]AVERage[:STATe]?", lambda call: self._text(call, lambda: str(int(self.timing.averaging))))
         self.add("TRIGger:SOURce", self._set_source)
-        self.add("TRIGger:SOURce?", lambda _call: self.timing.source)
+        self.add("TRIGger:SOURce?", lambda call: self._text(call, lambda: self.timing.source))
         self.add("TRIGger:SLOPe", self._set_slope)
-        self.add("TRIGger:SLOPe?", lambda _call: self.timing.slope)
+        self.add("TRIGger:SLOPe?", lambda call: self._text(call, lambda: self.timing.slope))
         self.add("INITiate[:IMMediate]", self._acquire)
         self.add("ABORt", self._abort)
 
     def _add_data_commands(self) -> None:
         self.add("FORMat[:DATA]", self._set_format)
-        self.add("FORMat[:DATA]?", lambda _call: self.format)
+        self.add("FORMat[:DATA]?", lambda call: self._text(call, lambda: self.format))
         self.add("FORMat:BORDer", self._set_border)
-        self.add("FORMat:BORDer?", lambda _call: "SWAP" if self.swapped else "NORM")
+        self.add("FORMat:BORDer?", lambda call: self._text(call, lambda: "SWAP" if self.swapped else "NORM"))
         self.add("TRACe[:DATA]?", self._trace)
 
     def _channel(self, call: Call) -> Channel:
@@ -198,6 +198,8 @@ class Oscilloscope(ScpiInstrument):
         word = call.parameters[0] if call.parameters else call.only()
         width = call.parameters[1] if len(call.parameters) > 1 else ""
         kind = read_choice(word, ("ASCii", "REAL", "INTeger"))
+        if len(call.parameters) > 2:
+            raise ScpiError(-108, call.parameters[2][:20])
         known = {("ASC", ""): "ASC", ("REAL", "32"): "REAL,32", ("REAL", "64"): "REAL,64", ("INT", "16"): "INT,16"}
         if (kind, width) not in known:
             raise ScpiError(-224, ",".join(call.parameters)[:30])

@@ -35,7 +35,7 @@ class FunctionGenerator(ScpiInstrument):
         number("[SOURce#:]PULSe:PERiod", _PERIOD, "period_s")
         number("OUTPut#:IMPedance", _STATED_LOAD, "load_ohm")
         self.add("OUTPut#[:STATe]", self._set_output)
-        self.add("OUTPut#[:STATe]?", lambda call: str(int(self._drive(call).on)))
+        self.add("OUTPut#[:STATe]?", lambda call: self._text(call, lambda: str(int(self._drive(call).on))))
         number("[SOURce#:]VOLTage[:LEVel][:IMMediate]:OFFSet", _LEVEL, "dc_V")
         self.add("[SOURce#:]FUNCtion[:SHAPe]", self._set_shape)
         self.add("[SOURce#:]FUNCtion[:SHAPe]?", self._shape)
@@ -90,7 +90,7 @@ class BiasSupply(ScpiInstrument):
         number("[SOURce:]VOLTage[:LEVel][:IMMediate][:AMPLitude]", _BIAS, "level_V")
         number("[SOURce:]CURRent[:LEVel][:IMMediate][:AMPLitude]", _COMPLIANCE, "compliance_A")
         self.add("OUTPut[:STATe]", self._set_output)
-        self.add("OUTPut[:STATe]?", lambda _call: str(int(self.world.rail.on)))
+        self.add("OUTPut[:STATe]?", lambda call: self._text(call, lambda: str(int(self.world.rail.on))))
         self.add("MEASure[:SCALar]:VOLTage[:DC]?", lambda call: self._reading(call, self.world.bias_V * 1.0002))
         self.add("MEASure[:SCALar]:CURRent[:DC]?", lambda call: self._reading(call, self.world.rail_current_A()))
 
@@ -129,7 +129,7 @@ class LoadSwitch(ScpiInstrument):
         text = call.only().replace(" ", "")
         if not (text.startswith("(@") and text.endswith(")") and text[2:-1].isascii() and text[2:-1].isdigit()):
             raise ScpiError(-102, text[:20])
-        place = int(text[2:-1])
+        place = int(text[2:-1].lstrip("0")[:9] or "0")
         if not 1 <= place <= len(self.loads_ohm):
             raise ScpiError(-222, text[:20])
         return place
