@@ -135,7 +135,10 @@ class Oscilloscope(ScpiInstrument):
         self.add("INPut#:COUPling", self._set_coupling)
         self.add("INPut#:COUPling?", lambda call: self._text(call, lambda: self._channel(call).coupling))
         self.add("INPut#:FILTer[:LPASs][:STATe]", self._set_limit)
-        self.add("INPut#:FILTer[:LPASs][:STATe]?", lambda call: self._text(call, lambda: str(int(self._channel(call).limit_on))))
+        self.add(
+            "INPut#:FILTer[:LPASs][:STATe]?",
+            lambda call: self._text(call, lambda: str(int(self._channel(call).limit_on))),
+        )
 
     def _add_timing_commands(self) -> None:
         def number(pattern: str, setting: Range, name: str, kind: type[int] | type[float]) -> None:
