@@ -2,29 +2,27 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
 
-from darkedge.analysis.captures import FloatArray, Record
+from darkedge.analysis.captures import FloatArray, Record, TimedRecord
 from darkedge.analysis.waveform.crossings import locate_crossings
 from darkedge.analysis.waveform.edges import (
     TEN_NINETY,
     Changes,
     Transitions,
-    find_changes,
     rough_crossings,
-    smoothing_length,
 )
-from darkedge.analysis.waveform.levels import StateLevels, histogram_levels
-from darkedge.analysis.waveform.noise import Noise, code_step_V, difference_sigma
+from darkedge.analysis.waveform.first_look import FirstLook, look_at
+from darkedge.analysis.waveform.levels import StateLevels
+from darkedge.analysis.waveform.noise import Noise
 from darkedge.analysis.waveform.plateaus import Plateau, Refined, refine_levels
+from darkedge.analysis.waveform.settled import SettledChannel, SettledEdges, fit_settled
 
 LEAST_SIGNAL_TO_NOISE = 5.0
 """Amplitude over noise below which no pulse is claimed."""
-
-LEAST_WIDTH = 3
-"""Samples that pulses, and the gaps between them, last at least in the median; what is shorter is noise or a glitch."""
 
 LEAST_CODES = 2.0
 """Amplitude in codes of the digitiser below which no pulse is claimed."""
@@ -51,6 +49,16 @@ class Channel:
     hiss_V: float
     start_s: float
     end_s: float
+    settled: SettledEdges | None = None
+
+    def located(self, record: Record, fractions: tuple[float, ...]) -> Transitions:
+        """Its edges at other reference levels; `record` is what it was measured from."""
+        if self.settled is not None:
+            return self.settled.transitions(fractions)
+        return locate_crossings(
+            record.time_s, record.signal_V, levels=self.levels, changes=self.changes,
+            noise=with_codes(self.noise, self.step_V), fractions=fractions,
+        )  # fmt: skip
 
 
 def measure_channel(
@@ -70,48 +78,62 @@ def measure_channel(
     ----------
     IEEE Std 181-2011: state levels, reference level instants, transition durations.
     """
-    signal, time = record.signal_V, record.time_s
-    step = code_step_V(signal, volts_per_code)
-    noise_V = difference_sigma(signal)
-    first = _first_look(signal, noise_V)
-    if first is None:
-        return None
-    levels, changes = first
-    refined = _refined(time, signal, levels, changes, noise_V, step)
-    if refined is None or _is_drift(refined, changes):
-        return None
-    transitions = locate_crossings(
-        time,
-        signal,
-        levels=refined.levels,
-        changes=changes,
-        noise=with_codes(refined.noise, step),
-        fractions=fractions,
+    return measure_channels([record], fractions=fractions, volts_per_code=[volts_per_code])[0]
+
+
+def measure_channels(
+    records: Sequence[Record], *, fractions: tuple[float, ...] = TEN_NINETY, volts_per_code: Sequence[float | None]
+) -> list[Channel | None]:
+    """Measure several channels, which is quicker than one by one; see `measure_channel`.
+
+    Channels whose pulses settle and whose edges are of the common family are fitted together (`settled`); what does not settle, is uneven,
+    or leaves more than noise is measured by itself.
+    """
+    looks = [look_at(record, volts_per_code=step) for record, step in zip(records, volts_per_code, strict=True)]
+    even = [k for k, look in enumerate(looks) if look is not None and look.is_even]
+    found: list[Channel | None] = [None] * len(records)
+    settled = dict(zip(even, fit_settled([look for k in even if (look := looks[k]) is not None]), strict=True))
+    for k, look in enumerate(looks):
+        if look is not None:
+            fit = settled.get(k)
+            found[k] = _one_by_one(look, fractions) if fit is None else _of_settled(look, fit, fractions)
+    return found
+
+
+def _of_settled(look: FirstLook, fit: SettledChannel, fractions: tuple[float, ...]) -> Channel:
+    """A channel as the joint fit found it; what the fit passed has neither droop nor ringing beyond its noise."""
+    levels, sigma = fit.levels, fit.noise.sigma_V
+    low, high = (
+        Plateau(level_V=level, u_level_V=u, settled=True, sigma_V=sigma)
+        for level, u in ((levels.low_V, levels.u_low_V), (levels.high_V, levels.u_high_V))
     )
     return Channel(
-        levels=refined.levels, noise=refined.noise, transitions=transitions, changes=changes, low=refined.low,
-        high=refined.high, step_V=step, hiss_V=noise_V, start_s=float(time[0]), end_s=float(time[-1]),
+        levels=levels, noise=fit.noise, transitions=fit.edges.transitions(fractions), changes=look.changes, low=low,
+        high=high, step_V=look.step_V, hiss_V=look.hiss_V, start_s=look.record.t0_s, end_s=_end_s(look.record),
+        settled=fit.edges,
     )  # fmt: skip
 
 
-def _first_look(signal_V: FloatArray, noise_V: float) -> tuple[StateLevels, Changes] | None:
-    """Levels by histogram and the changes of state between them, the record smoothed as far as its noise asks."""
-    levels = histogram_levels(signal_V)
-    if levels is None:
+def _end_s(record: Record) -> float:
+    if isinstance(record, TimedRecord):
+        return float(record.time_s[-1])
+    return record.t0_s + record.dt_s * (record.signal_V.size - 1)
+
+
+def _one_by_one(look: FirstLook, fractions: tuple[float, ...]) -> Channel | None:
+    """Measure a channel that assumes less: levels from plateaus, edges by shape and local polynomials."""
+    signal, time = look.record.signal_V, look.record.time_s
+    refined = _refined(time, signal, look.levels, look.changes, look.hiss_V, look.step_V)
+    if refined is None or _is_drift(refined, look.changes):
         return None
-    smooth = smoothing_length(noise_V, levels.amplitude_V, signal_V.size)
-    if smooth > 1:
-        levels = histogram_levels(signal_V, smooth=smooth)
-        if levels is None:
-            return None
-    changes = find_changes(signal_V, levels, smooth=smooth)
-    return (levels, changes) if changes.index.size and not _is_flicker(changes) else None
-
-
-def _is_flicker(changes: Changes) -> bool:
-    lasting = np.diff(changes.index)
-    states = (lasting[0::2], lasting[1::2])
-    return any(state.size > 0 and float(np.median(state)) < LEAST_WIDTH for state in states)
+    transitions = locate_crossings(
+        time, signal, levels=refined.levels, changes=look.changes, noise=with_codes(refined.noise, look.step_V),
+        fractions=fractions,
+    )  # fmt: skip
+    return Channel(
+        levels=refined.levels, noise=refined.noise, transitions=transitions, changes=look.changes, low=refined.low,
+        high=refined.high, step_V=look.step_V, hiss_V=look.hiss_V, start_s=float(time[0]), end_s=float(time[-1]),
+    )  # fmt: skip
 
 
 def _refined(

@@ -83,11 +83,14 @@ def find_changes(signal_V: FloatArray, levels: StateLevels, *, smooth: int = 1) 
     smooth : int
         Length of the running mean taken first, in samples.
     """
-    progress = (running_mean(signal_V, smooth) - levels.low_V) / levels.amplitude_V
-    state = np.zeros(progress.size, dtype=np.int8)
-    state[progress >= 0.5 + HYSTERESIS] = 1
-    state[progress <= 0.5 - HYSTERESIS] = -1
-    known = np.flatnonzero(state)
+    smoothed = running_mean(signal_V, smooth)
+    high = smoothed >= levels.low_V + (0.5 + HYSTERESIS) * levels.amplitude_V
+    low = smoothed <= levels.low_V + (0.5 - HYSTERESIS) * levels.amplitude_V
+    state = high.view(np.int8) - low.view(np.int8)
+    moved = np.flatnonzero(state[1:] != state[:-1])
+    # Where the state moves, the sample before and the one after; of those in a state, where one follows the other.
+    beside = np.unique(np.concatenate((moved, moved + 1)))
+    known = beside[state[beside] != 0]
     turns = np.flatnonzero(np.diff(state[known]))
     left, right = known[turns], known[turns + 1]
     return Changes(index=np.asarray((left + right + 1) // 2, dtype=np.intp), rising=state[right] > 0)

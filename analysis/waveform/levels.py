@@ -61,7 +61,10 @@ def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | 
     bottom, top = float(np.min(values)), float(np.max(values))
     if top - bottom <= FLAT_RATIO * max(abs(top), abs(bottom)):
         return None
-    counts, _ = np.histogram(values, bins=BINS, range=(bottom, top))
+    place = ((values - bottom) * (BINS / (top - bottom))).astype(np.intp)
+    counts = np.bincount(place, minlength=BINS + 1)
+    counts[BINS - 1] += counts[BINS]  # the very top belongs to the last bin
+    counts = counts[:BINS]
     lower, upper = _mode(counts[: BINS // 2][::-1]), _mode(counts[BINS // 2 :])
     # A decaying tail is dense next to the middle: beside a true state a mode there must hold half of its own half.
     low_is_state = lower.holds(PLATEAU_SHARE if lower.outer or not upper.outer else INNER_PLATEAU_SHARE)

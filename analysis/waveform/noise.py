@@ -22,6 +22,12 @@ LONGEST_LAG = 256
 ENOUGH_TO_CORRELATE = 4096
 """Samples of one flat part that are enough to tell the correlation."""
 
+MOST_DIFFERENCES = 8192
+"""Differences of neighbours that are looked at for hiss and codes: enough for a per cent; of a longer record, stretches."""
+
+STRETCHES = 16
+"""Stretches, evenly over a long record, in which the differences are taken."""
+
 FEWEST_CODES, MOST_CODES = 8, 65536
 """Reach of a record, in its smallest steps, between which the smallest step is taken for a code."""
 
@@ -43,6 +49,11 @@ class Noise:
     def known(self) -> bool:
         """Whether the flat parts were long enough to tell."""
         return self.n_flat >= ENOUGH_FLAT_SAMPLES
+
+    @property
+    def independent(self) -> float:
+        """How many independent samples tell as much of the size of the noise: n over the sum of squared correlations (Bartlett 1946)."""
+        return self.n_flat / (1.0 + 2.0 * float(np.sum(np.square(self.correlation[1:]))))
 
     def inflation(self, n: int) -> float:
         """Variance of the mean of n neighbouring samples, over that of n independent ones.
@@ -69,7 +80,7 @@ def difference_sigma(signal_V: FloatArray) -> float:
     ----------
     signal_V : array, shape (n,), n >= 2, volts.
     """
-    steps = np.abs(np.diff(signal_V))
+    steps = steps_between(signal_V)
     sigma = MAD_TO_SIGMA * float(np.median(steps)) / math.sqrt(2)
     if sigma > 0:
         return sigma
@@ -81,6 +92,15 @@ def difference_sigma(signal_V: FloatArray) -> float:
     return float(np.sqrt(np.mean(small**2) / 2))
 
 
+def steps_between(signal_V: FloatArray) -> FloatArray:
+    """Absolute differences of neighbouring samples; of a long record only in stretches spread evenly over it."""
+    if signal_V.size <= 2 * MOST_DIFFERENCES:
+        return np.abs(np.diff(signal_V))
+    each = MOST_DIFFERENCES // STRETCHES
+    starts = np.linspace(0, signal_V.size - each - 1, STRETCHES).astype(np.intp)
+    return np.abs(np.concatenate([np.diff(signal_V[k : k + each + 1]) for k in starts]))
+
+
 def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:
     """Voltage of one code of the digitiser: as stated, else as seen; 0 where no steps can be seen.
 
@@ -88,7 +108,7 @@ def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:
     """
     if stated_V is not None and stated_V > 0:
         return stated_V
-    steps = np.abs(np.diff(signal_V))
+    steps = steps_between(signal_V)
     largest, reach = float(np.max(steps)), float(np.ptp(signal_V))
     steps = steps[steps > 1e-9 * max(largest, float(np.max(np.abs(signal_V))))]
     if steps.size < 2:
@@ -134,6 +154,48 @@ def flat_noise(residuals_V: Sequence[FloatArray], *, fallback_V: float) -> Noise
         return Noise(sigma_V=0.0, correlation=np.ones(1), n_flat=n_flat)
     rho = np.divide(sums, np.maximum(counts, 1)) / (sums[0] / counts[0])
     return Noise(sigma_V=float(np.sqrt(variance)), correlation=_cut(rho, counts), n_flat=n_flat)
+
+
+def rest_noise(parts_V: Sequence[FloatArray], *, fallback_V: float) -> Noise:
+    """Noise from stretches at rest, looked at closely only where it is not white.
+
+    Noise counts as white where neither its first lags nor the means of blocks of it say otherwise, at three standard deviations.
+
+    Parameters
+    ----------
+    parts_V : sequence of arrays, volts
+        One array for each stretch, samples in order, edges' tails taken off.
+    fallback_V : float
+        Noise of one sample where the stretches are too short to tell.
+    """
+    parts = [part - part.mean() for part in parts_V if part.size >= 4]
+    n_flat = sum(part.size for part in parts)
+    if n_flat < 8:
+        return Noise(sigma_V=fallback_V, correlation=np.ones(1), n_flat=n_flat)
+    power = float(sum(float(part @ part) for part in parts))
+    variance = power / max(n_flat - len(parts), 1)
+    if not variance > 0:
+        return Noise(sigma_V=0.0, correlation=np.ones(1), n_flat=n_flat)
+    if _looks_white(parts, power, n_flat):
+        return Noise(sigma_V=math.sqrt(variance), correlation=np.ones(1), n_flat=n_flat)
+    return flat_noise(parts, fallback_V=fallback_V)
+
+
+def _looks_white(parts: Sequence[FloatArray], power: float, n_flat: int) -> bool:
+    allowed = 3.0 / math.sqrt(n_flat)
+    for lag in (1, 2, 3, 5):
+        product = sum(float(part[lag:] @ part[:-lag]) for part in parts if part.size > lag)
+        if abs(product / power + 1.0 / n_flat) > allowed:
+            return False
+    for block in (8, 64):
+        means = [part[: part.size // block * block].reshape(-1, block).mean(axis=1) for part in parts]
+        count = sum(m.size for m in means)
+        if count < 6:
+            break
+        ratio = sum(float(m @ m) for m in means) * block * n_flat / power / count
+        if abs(ratio - 1.0) > 3.5 * math.sqrt(2.0 / count):
+            return False
+    return True
 
 
 def _add_lagged_products(part: FloatArray, sums: FloatArray, counts: FloatArray) -> None:

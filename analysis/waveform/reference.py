@@ -9,8 +9,7 @@ import numpy as np
 from darkedge.analysis.captures import FloatArray, Record
 from darkedge.analysis.errors import InputError
 from darkedge.analysis.quantities import format_quantity
-from darkedge.analysis.waveform.channel import Channel, with_codes
-from darkedge.analysis.waveform.crossings import locate_crossings
+from darkedge.analysis.waveform.channel import Channel
 from darkedge.analysis.waveform.edges import Transitions
 
 NEAREST_TO_LEVEL = 0.03
@@ -91,13 +90,9 @@ def relocate(
         if not all(NEAREST_TO_LEVEL <= share <= 1 - NEAREST_TO_LEVEL for share in middles.values()):
             return None
     up, down = (
-        locate_crossings(
-            record.time_s,
-            record.signal_V,
-            levels=levels,
-            changes=channel.changes,
-            noise=with_codes(channel.noise, channel.step_V),
-            fractions=(
+        channel.located(
+            record,
+            (
                 reference.low_ratio,
                 middles[rising] - BESIDE,
                 middles[rising],

@@ -134,16 +134,16 @@ def _model(x: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArra
     return b * value, np.stack((b * by_x0, b * by_tau, b * by_s, value), axis=1)
 
 
-def _start(quarter: FloatArray) -> FloatArray:
-    """First guess from x at 10, 50 and 90 %, shape (n, 3): width and skewness of the edge fix all three parameters."""
-    width = quarter[:, 2] - quarter[:, 0]
+def first_guess(quarter: FloatArray) -> FloatArray:
+    """First guess of x0, ln tau and ln s from x at 10, 50 and 90 %, both of shape (n, 3): width and skewness fix all three."""
+    width = np.maximum(quarter[:, 2] - quarter[:, 0], 1e-3)
     skew = (quarter[:, 2] - quarter[:, 1]) / np.maximum(quarter[:, 1] - quarter[:, 0], 1e-9)
     # Rough laws read off the shape itself; they only have to be near.
     share = np.interp(skew, (1.0, 1.25, 1.73, 2.47, 2.74), (0.02, 0.29, 0.386, 0.44, 0.455))
     spread = np.interp(skew, (1.0, 1.25, 1.73, 2.47, 2.74), (0.39, 0.29, 0.193, 0.088, 0.02))
     tau, s = share * width, spread * width
     lead = np.interp(spread / share, (0.05, 0.2, 0.5, 1.0, 20.0), (0.693, 0.71, 0.78, 0.86, 1.0)) * tau
-    return np.stack((quarter[:, 1] - lead, np.log(tau), np.log(s), np.ones_like(tau)), axis=1)
+    return np.stack((quarter[:, 1] - lead, np.log(tau), np.log(s)), axis=1)
 
 
 def fit_shapes(
@@ -160,7 +160,7 @@ def fit_shapes(
     cut_short : array of bool, shape (n,)
         Edges whose asymptote is fitted.
     """
-    start = _start(quarter)
+    start = np.concatenate((first_guess(quarter), np.ones((quarter.shape[0], 1))), axis=1)
     free = np.ones(start.shape, dtype=np.bool_)
     free[:, 3] = cut_short
     fits = fit_rows(_model, start, x, progress, weight, free=free, bounded=_bounded)

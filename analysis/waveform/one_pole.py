@@ -1,0 +1,125 @@
+"""One pole behind a Gaussian front end, seen by samples or by the means of neighbouring samples.
+
+A step at x0 through a Gaussian filter of width s and one pole of time constant tau is F(x) (formulas in `shapes`). A bin that
+holds the mean of many samples shows the mean of F over it, which the running integral of F gives exactly:
+
+    G(x) = s (z Phi(z) + phi(z)) - tau F(x),   dG/dx0 = -F,   dG/d ln s = s phi(z) - tau dF/d ln s,   dG/d ln tau = -tau (F + dF/d ln tau).
+
+A bin of few samples shows F blunted by the variance of their places, (c^2 - 1) / 12 steps squared, which widens s.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy.special import erfcx, ndtr
+
+from darkedge.analysis.captures import FloatArray
+
+_ROOT_HALF = float(np.sqrt(0.5))
+_ROOT_TWO_PI = float(np.sqrt(2 * np.pi))
+_FARTHEST = 1e8
+
+NARROWEST, WIDEST = 1e-3, 40.0
+"""Bounds of tau and s in units in which an edge is about 1 wide."""
+
+PLACE, LN_TAU, LN_S, START, SWING = range(5)
+"""Places of the parameters: x0 + tau (the mean of the impulse response, which hardly moves with tau), ln tau, ln s, level before the edge,
+and what the edge adds to it."""
+
+
+def parts(
+    x: FloatArray, x0: FloatArray, tau: FloatArray, s: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """F, E, phi(z) and s / tau of the module's formulas, broadcast over all arguments."""
+    z = np.clip((x - x0) / s, -_FARTHEST, _FARTHEST)
+    u = s / tau
+    bell = np.exp(-0.5 * z * z)
+    early = u > z
+    scaled = 0.5 * bell * erfcx(np.where(early, u - z, 0.0) * _ROOT_HALF)
+    plain = np.exp(np.minimum(0.5 * u * u - z * u, 0.0)) * ndtr(z - u)
+    rest = np.where(early, scaled, plain)
+    return ndtr(z) - rest, rest, bell / _ROOT_TWO_PI, u
+
+
+def by_points(x: FloatArray, blur: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Values (n, m) and derivatives by the five parameters (n, 5, m) of bins of few samples."""
+    x0, tau, s, start, swing = _unpacked(parameters)
+    wide = np.sqrt(s * s + blur)
+    value, rest, bell, u = parts(x, x0, tau, wide)
+    by_tau = -rest * ((x - x0) / tau - u * u) - bell * u
+    by_s = (bell * u - rest * u * u) * (s / wide) ** 2
+    return start + swing * value, np.stack(
+        (-swing * rest / tau, swing * (by_tau + rest), swing * by_s, np.ones_like(value), value), axis=1
+    )
+
+
+def by_means(low: FloatArray, high: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Values (n, m) and derivatives (n, 5, m) of bins that hold the mean of many samples."""
+    x0, tau, s, start, swing = _unpacked(parameters)
+    size = high - low
+    safe = np.where(size > 0, size, 1.0)
+    both = [_running(edge, x0, tau, s) for edge in (low, high)]
+    value, by_x0, by_tau, by_s = ((b - a) / safe for a, b in zip(*both, strict=True))
+    return start + swing * value, np.stack(
+        (swing * by_x0, swing * (by_tau - tau * by_x0), swing * by_s, np.ones_like(value), value), axis=1
+    )
+
+
+def _running(
+    x: FloatArray, x0: FloatArray, tau: FloatArray, s: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """G and its derivatives by x0, ln tau and ln s."""
+    value, rest, bell, u = parts(x, x0, tau, s)
+    away = x - x0
+    integral = away * (value + rest) + s * bell - tau * value  # Phi(z) = F + E
+    by_tau = -tau * (value - rest * (away / tau - u * u) - bell * u)
+    by_s = s * bell - tau * (bell * u - rest * u * u)
+    return integral, -value, by_tau, by_s
+
+
+def instants(parameters: FloatArray, shares: FloatArray, first: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Where each edge passes the shares of its way, and how far a change of place, ln tau and ln s moves that.
+
+    Parameters
+    ----------
+    parameters : array, shape (n, 5)
+    shares, first : arrays, shape (n, k)
+        Shares between 0 and 1, and where to begin looking.
+
+    Returns
+    -------
+    x : array, shape (n, k)
+    gradient : array, shape (n, k, 3)
+    """
+    x0, tau, s, _, _ = _unpacked(parameters)
+    low, high = x0 - 9 * s, x0 + 9 * s + tau * (1 - np.log1p(-shares))
+    x = np.clip(first, low, high)
+    done = np.zeros(x.shape, dtype=np.bool_)
+    for _ in range(
+        40
+    ):  # Newton's method, kept inside a bracket that shrinks; what is found stays, whatever the others need
+        value, rest, _, _ = parts(x, x0, tau, s)
+        below = value < shares
+        low, high = np.where(below, x, low), np.where(below, high, x)
+        step = x + (shares - value) * tau / np.maximum(rest, 1e-300)
+        new = np.where((step > low) & (step < high), step, 0.5 * (low + high))
+        x, done = np.where(done, x, new), done | (np.abs(new - x) <= 1e-10 * (s + tau))
+        if bool(np.all(done)):
+            break
+    value, rest, bell, u = parts(x, x0, tau, s)
+    slope = np.maximum(rest / tau, 1e-12)
+    by = (-rest / tau, -rest * ((x - x0) / tau - u * u - 1) - bell * u, bell * u - rest * u * u)
+    return x, np.stack([-d / slope for d in by], axis=2)
+
+
+def bounded(parameters: FloatArray) -> FloatArray:
+    """Keep the parameters where the formulas hold."""
+    parameters[:, LN_TAU : LN_S + 1] = np.clip(parameters[:, LN_TAU : LN_S + 1], np.log(NARROWEST), np.log(WIDEST))
+    parameters[:, SWING] = np.clip(parameters[:, SWING], 0.3, 3.0)
+    return parameters
+
+
+def _unpacked(parameters: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]:
+    place, ln_tau, ln_s, start, swing = (parameters[:, k : k + 1] for k in range(5))
+    tau = np.exp(ln_tau)
+    return place - tau, tau, np.exp(ln_s), start, swing

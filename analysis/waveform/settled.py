@@ -1,0 +1,533 @@
+"""Settled pulses: levels and edges of many channels fitted together, all samples at once.
+
+Each edge is fitted with the plateaus on its two sides: level before, swing, and the shape of one pole behind a Gaussian front end
+(`one_pole`), on bins that keep what the samples have to say. Levels that the edges of a channel share are then joined by their
+information, and every edge is put on the joint levels, which is the least-squares fit of all of them together. Noise is taken from the
+plateaus; where it is not white, the bins are whitened and fitted again. A channel whose edges leave more than noise, or whose pulses do
+not settle, is left to `plateaus` and `crossings`, which assume less.
+
+References: IEEE Std 181-2011 for levels and instants; Aitken (1935) for least squares under correlated noise.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.waveform.binned import BinnedEdges, CutEdges, bin_edges, cut_edges
+from darkedge.analysis.waveform.edges import BoolArray, IntArray, Transitions
+from darkedge.analysis.waveform.first_look import FirstLook
+from darkedge.analysis.waveform.least_squares import WhiteFits, fit_white_rows
+from darkedge.analysis.waveform.levels import StateLevels
+from darkedge.analysis.waveform.noise import Noise, rest_noise, u_quantised_V
+from darkedge.analysis.waveform.one_pole import (
+    LN_S,
+    LN_TAU,
+    NARROWEST,
+    PLACE,
+    START,
+    SWING,
+    WIDEST,
+    bounded,
+    by_means,
+    by_points,
+    instants,
+)
+from darkedge.analysis.waveform.shapes import first_guess
+from darkedge.analysis.waveform.whitening import whitener, whitening_matrix
+
+MEAN_FROM = 3
+"""Samples in a bin across the edge from which the bin is taken as a mean, not as points."""
+
+MOST_REST = 4096
+"""Samples at rest that are looked at for the noise of a channel."""
+
+LUMPS = np.array([-1.3, -0.75, -0.45, -0.2, 0.0, 0.2, 0.45, 0.8, 1.3, 2.0, 3.5, 7.0, 20.0])
+"""Bounds, in edge times from the 50 % point, of the parts in which what a fit leaves is lumped."""
+
+LEAST_WEIGHT = 0.02
+"""Akaike weight, over that of the best, below which a member of the family is no rival."""
+
+DYING = 4.0
+"""Standard deviations by which noise may be larger after an edge than later on."""
+
+LEAST_INDEPENDENT = 20.0
+"""Independent samples at rest from which slow noise is believed to be noise."""
+
+MISFIT = 3.5
+"""Standard deviations of chi-squared beyond which edges are not of the family, or their plateaus not level."""
+
+FINEST_RATIO = 1e-4
+"""Share of the amplitude below which no misfit is looked for: what the bins may blunt."""
+
+BETWEEN = 0.7
+"""What the course of an edge between its samples leaves open, in edge times over the cube of the number of samples on the edge: between
+two family members that agree on the samples."""
+
+FEWEST_TO_FIT, ENOUGH_TO_FIT = 2, 4
+"""Samples between 10 and 90 %: below the first a straight line between two is all there is; from the second the fit stands."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class SettledEdges:
+    """The edges of one channel on their joint levels.
+
+    `families` are the members that an edge may be of, each with its Akaike weight; instants are their weighted means. Units are `unit_s`
+    (n,) since `origin_s` (n,). `straight` holds, for edges with few samples, progress at some samples about the 50 % point.
+    """
+
+    rising: BoolArray
+    families: tuple[FamilyMember, ...]
+    origin_s: FloatArray
+    unit_s: FloatArray
+    n_samples: IntArray
+    straight: StraightLines
+
+    def transitions(self, fractions: tuple[float, ...]) -> Transitions:
+        """Instants at the reference levels `fractions` (progress, rising), with what is known of them."""
+        n, k = self.rising.size, len(fractions)
+        x, covariance, pull = self._averaged(np.tile(np.asarray(fractions), (n, 1)))
+        unit = self.unit_s
+        covariance = covariance * (unit**2)[:, None, None]
+        pull = pull * unit[:, None, None]
+        samples = np.maximum(self.n_samples, 1)
+        bend = np.repeat((BETWEEN * unit / samples**3)[:, None], k, axis=1)
+        time = self.origin_s[:, None] + unit[:, None] * x
+        found = Transitions(
+            fractions=fractions, rising=self.rising, time_s=time, covariance_s2=covariance, bend_s=bend, pull_s_per_V=pull,
+            n_samples=self.n_samples, by_shape=np.ones(n, dtype=np.bool_),
+        )  # fmt: skip
+        return self.straight.instead(found) if self.straight.rows.size else found
+
+    def _averaged(self, shares: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Instants, covariance and pull as means over the family members; that members differ adds to the covariance.
+
+        Buckland, Burnham and Augustin, Biometrics 53, 603 (1997).
+        """
+        n, k = shares.shape
+        x, covariance, pull = np.zeros((n, k)), np.zeros((n, k, k)), np.zeros((n, k, 2))
+        square = np.zeros((n, k, k))
+        for member in self.families:
+            rows = np.flatnonzero(member.weight > 0)
+            if rows.size == 0:
+                continue
+            weight = member.weight[rows]
+            at, gradient = instants(
+                member.parameters[rows], shares[rows], np.log(shares[rows] / (1 - shares[rows])) / 4.4
+            )
+            x[rows] += weight[:, None] * at
+            covariance[rows] += weight[:, None, None] * (
+                gradient @ member.covariance[rows] @ gradient.transpose(0, 2, 1)
+            )
+            pull[rows] += weight[:, None, None] * (gradient @ member.by_levels[rows])
+            square[rows] += weight[:, None, None] * (at[:, :, None] * at[:, None, :])
+        return x, covariance + np.where(self._mixed[:, None, None], square - x[:, :, None] * x[:, None, :], 0.0), pull
+
+    @property
+    def _mixed(self) -> BoolArray:
+        return np.asarray(np.max([member.weight for member in self.families], axis=0) < 1.0)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class FamilyMember:
+    """One member of the family fitted to some edges.
+
+    `parameters` (n, 5); `covariance` (n, 3, 3) of place, ln tau and ln s with the levels known; `by_levels` (n, 3, 2) what an error of low
+    and high level, in volts, does to them; `weight` (n,), 0 where it is no rival.
+    """
+
+    parameters: FloatArray
+    covariance: FloatArray
+    by_levels: FloatArray
+    weight: FloatArray
+
+    def select(self, rows: slice) -> FamilyMember:
+        """Some of the edges."""
+        return FamilyMember(
+            parameters=self.parameters[rows], covariance=self.covariance[rows], by_levels=self.by_levels[rows],
+            weight=self.weight[rows],
+        )  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class StraightLines:
+    """Edges with few samples, `rows` of them: progress (n, m) at samples `step_s` apart from `start_s` (n,) on, and the noise."""
+
+    rows: IntArray
+    progress: FloatArray
+    start_s: FloatArray
+    step_s: float
+    sigma: float
+    amplitude_V: float
+
+    def instead(self, found: Transitions) -> Transitions:
+        """Put straight lines between two samples wherever they are better known than the fit."""
+        row = np.arange(self.rows.size)
+        time, variance, pull = [], [], []
+        rising = found.rising[self.rows]
+        samples = np.maximum(found.n_samples[self.rows], 1)
+        for fraction in found.fractions:
+            excess = self.progress - fraction
+            below = np.argmin(np.cumsum(np.clip(excess, -0.1, 0.1), axis=1), axis=1)
+            below = np.minimum(below, excess.shape[1] - 2)
+            a, b = excess[row, below], excess[row, below + 1]
+            slope = np.maximum(b - a, 0.05)
+            share = np.where(b > a, np.clip(-a / np.where(b > a, b - a, 1.0), 0.0, 1.0), 0.5)
+            time.append(self.start_s + (below + share) * self.step_s)
+            variance.append((self.sigma * self.step_s / slope) ** 2)
+            per_volt = self.step_s / slope / self.amplitude_V
+            to_high = np.where(rising, fraction, 1.0 - fraction)
+            sign = np.where(rising, 1.0, -1.0)
+            pull.append(np.stack((sign * (1 - to_high) * per_volt, sign * to_high * per_volt), axis=1))
+        at, spread = np.maximum.accumulate(np.stack(time, axis=1), axis=1), np.stack(variance, axis=1)
+        bend = (self.step_s / np.sqrt(12) / samples)[:, None] * np.ones_like(at)
+        fitted = np.einsum("eii->ei", found.covariance_s2)[self.rows] + found.bend_s[self.rows] ** 2
+        better = (samples < FEWEST_TO_FIT) | (np.mean(spread + bend**2, axis=1) < np.mean(fitted, axis=1))
+        rows = self.rows[better]
+        times, covariances = found.time_s.copy(), found.covariance_s2.copy()
+        bends, pulls, by_shape = found.bend_s.copy(), found.pull_s_per_V.copy(), found.by_shape.copy()
+        times[rows], bends[rows], by_shape[rows] = at[better], bend[better], False
+        covariances[rows] = spread[better][:, :, None] * np.eye(len(found.fractions))
+        pulls[rows] = np.stack(pull, axis=1)[better]
+        return Transitions(
+            fractions=found.fractions, rising=found.rising, time_s=times, covariance_s2=covariances, bend_s=bends,
+            pull_s_per_V=pulls, n_samples=found.n_samples, by_shape=by_shape,
+        )  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class SettledChannel:
+    """What the joint fit found of one channel."""
+
+    levels: StateLevels
+    noise: Noise
+    edges: SettledEdges
+
+
+def fit_settled(looks: Sequence[FirstLook]) -> list[SettledChannel | None]:
+    """Fit channels of even records together; `None` for one that does not settle or is not of the family."""
+    if not looks:
+        return []
+    cut = cut_edges(looks)
+    fit_for = np.ones(len(looks), dtype=np.bool_)
+    np.logical_and.at(fit_for, cut.channel, cut.settled)
+    kept = np.flatnonzero(fit_for)
+    found: list[SettledChannel | None] = [None] * len(looks)
+    if kept.size == 0:
+        return found
+    rows = np.flatnonzero(fit_for[cut.channel])
+    renumbered = np.cumsum(fit_for) - 1
+    job = _Job(
+        looks=[looks[k] for k in kept], cut=cut.select(rows, channel=renumbered[cut.channel[rows]].astype(np.intp))
+    )
+    for k, channel in zip(kept, job.channels(), strict=True):
+        found[int(k)] = channel
+    return found
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Parted:
+    """A fit parted into levels and shapes.
+
+    `low_high_V` (n, 2) and their `information` (n, 2, 2); `given` (n, 3, 3), the covariance of the shape once the levels are known, and
+    `by_volts` (n, 3, 2), what a change of the levels does to it.
+    """
+
+    low_high_V: FloatArray
+    information: FloatArray
+    given: FloatArray
+    by_volts: FloatArray
+
+    def on_levels(self, parameters: FloatArray, low_high_V: FloatArray, weight: FloatArray) -> FamilyMember:
+        """Put every edge on given levels (n, 2)."""
+        moved = parameters.copy()
+        moved[:, :START] += (self.by_volts @ (low_high_V - self.low_high_V)[:, :, None])[:, :, 0]
+        return FamilyMember(parameters=bounded(moved), covariance=self.given, by_levels=self.by_volts, weight=weight)
+
+
+def _put(fits: WhiteFits, new: WhiteFits, rows: IntArray) -> WhiteFits:
+    """Put newer fits in the place of some rows."""
+    merged = {}
+    for name in ("parameters", "residual", "derivative", "inverse", "good"):
+        whole = getattr(fits, name).copy()
+        whole[rows] = getattr(new, name)
+        merged[name] = whole
+    return WhiteFits(**merged)
+
+
+def _dies_down(rest_V: Sequence[FloatArray], noise: Noise) -> bool:
+    """Whether what is called noise is larger in the first halves of the stretches at rest than in the second: then it is ringing or a tail."""
+    halves = [(part[: part.size // 2], part[part.size // 2 :]) for part in rest_V if part.size >= 16]
+    if not halves or noise.sigma_V <= 0:
+        return False
+    early, late = (sum(float(np.var(half[k])) * half[k].size for half in halves) for k in (0, 1))
+    dof = max(noise.independent / 2, 1.0)
+    return early > 0 and float(np.log(early / max(late, 1e-300))) > DYING * float(np.sqrt(4 / dof))
+
+
+class _Job:
+    """The joint fit of some channels, step by step."""
+
+    def __init__(self, *, looks: Sequence[FirstLook], cut: CutEdges) -> None:
+        self.looks, self.cut = looks, cut
+        self.bins: BinnedEdges = bin_edges(cut)
+        self.means = self.bins.fine_count >= MEAN_FROM
+        self.root = np.sqrt(self.bins.count.astype(np.float64))
+        self.entries = np.count_nonzero(self.bins.count, axis=1).astype(np.float64)
+        self.bounds = np.searchsorted(cut.channel, np.arange(len(looks) + 1))
+        self.coloured = np.empty(0, dtype=np.intp)
+        self.place = np.full(cut.channel.size, -1)
+        self.matrix = np.empty((0, 0, 0))
+        self.sigma_V, self.sigma = np.empty(0), np.empty(0)
+        self.dying = np.zeros(len(looks), dtype=np.bool_)
+
+    def channels(self) -> list[SettledChannel | None]:
+        quarter = (self.cut.quarter - self.cut.quarter[:, 1:2]) / self.cut.unit[:, None]
+        shape = first_guess(quarter)
+        shape[:, PLACE] += np.exp(shape[:, LN_TAU])
+        start = np.concatenate((shape, np.zeros((shape.shape[0], 1)), np.ones((shape.shape[0], 1))), axis=1)
+        every = np.arange(start.shape[0])
+        fits = self._fit(start, every)
+        noises = [self._noise(k, fits.parameters) for k in range(len(self.looks))]
+        self._whiten(noises)
+        if self.coloured.size:
+            fits = _put(fits, self._fit(fits.parameters[self.coloured], self.coloured), self.coloured)
+        return self._joined(self._rivals(fits), noises)
+
+    def _whiten(self, noises: Sequence[Noise]) -> None:
+        """Hold the noise of each channel: its size, and matrices that whiten the bins where it is not white."""
+        codes = np.array([look.step_V for look in self.looks]) / np.sqrt(12)
+        self.sigma_V = np.maximum(np.array([noise.sigma_V for noise in noises]), codes)
+        self.sigma = np.maximum(self.sigma_V[self.cut.channel] / self.cut.amplitude_V, FINEST_RATIO / 10)
+        running = {k: whitener(noise.correlation) for k, noise in enumerate(noises) if noise.correlation.size > 1}
+        rows = np.flatnonzero(np.isin(self.cut.channel, list(running)))
+        self.coloured, self.place = rows, np.full(self.cut.channel.size, -1)
+        self.place[rows] = np.arange(rows.size)
+        self.matrix = np.array([
+            whitening_matrix(running[int(self.cut.channel[row])], self.bins.begin[row], self.bins.end[row]) for row in rows
+        ])  # fmt: skip
+
+    def _rivals(self, fits: WhiteFits) -> list[tuple[WhiteFits, FloatArray]]:
+        """The whole family and its two simpler members, one pole alone and a Gaussian edge alone, each with its Akaike weight (n,)."""
+        rows = np.arange(fits.parameters.shape[0])
+        found = [(fits, np.zeros(rows.size))]
+        width = np.exp(fits.parameters[:, LN_TAU : LN_S + 1])
+        spread = np.hypot(width[:, 0], width[:, 1])
+        for held, other in ((LN_S, LN_TAU), (LN_TAU, LN_S)):
+            start = fits.parameters.copy()
+            start[:, held] = np.log(NARROWEST)
+            start[:, other] = np.log(np.clip(spread, NARROWEST, WIDEST))
+            found.append((self._fit(bounded(start), rows, held=held), np.zeros(rows.size)))
+        criterion = np.stack([
+            np.where(fit.good, np.sum(fit.residual**2, axis=1) / self.sigma**2 + 2 * (k == 0), np.inf)
+            for k, (fit, _) in enumerate(found)
+        ])  # fmt: skip
+        criterion -= np.min(np.where(np.isfinite(criterion), criterion, 1e300), axis=0)
+        weight = np.exp(-0.5 * np.minimum(criterion, 1e3))
+        weight = np.where(weight < LEAST_WEIGHT, 0.0, weight)
+        weight /= np.maximum(np.sum(weight, axis=0), 1e-300)
+        return [(fit, weight[k]) for k, (fit, _) in enumerate(found)]
+
+    def _model(self, rows: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Values and derivatives of the bins of some edges."""
+        bins, means = self.bins, self.means[rows]
+        if bool(np.all(means)):
+            return by_means(bins.low[rows], bins.high[rows], parameters)
+        if not bool(np.any(means)):
+            return by_points(bins.x[rows], bins.blur[rows], parameters)
+        value = np.empty((rows.size, bins.y.shape[1]))
+        derivative = np.empty((rows.size, 5, bins.y.shape[1]))
+        for which, of in ((means, by_means), (~means, None)):
+            some = rows[which]
+            if of is None:
+                value[which], derivative[which] = by_points(bins.x[some], bins.blur[some], parameters[which])
+            else:
+                value[which], derivative[which] = of(bins.low[some], bins.high[some], parameters[which])
+        return value, derivative
+
+    def _fit(self, start: FloatArray, rows: IntArray, *, held: int | None = None) -> WhiteFits:
+        """Fit some edges, their bins whitened as far as the noise is known; the parameter `held` stays."""
+
+        def model(some: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+            which = rows[some]
+            value, derivative = self._model(which, parameters)
+            if held is not None:
+                derivative[:, held] = 0.0
+            return self._whitened(which, self.bins.y[which] - value, derivative)
+
+        fits = fit_white_rows(model, start, entries=self.entries[rows], bounded=bounded)
+        if held is not None:
+            fits.inverse[:, held, :] = 0.0
+            fits.inverse[:, :, held] = 0.0
+        return fits
+
+    def _whitened(self, rows: IntArray, residual: FloatArray, derivative: FloatArray) -> tuple[FloatArray, FloatArray]:
+        root = self.root[rows]
+        white_residual, white_derivative = root * residual, root[:, None, :] * derivative
+        which = np.flatnonzero(self.place[rows] >= 0)
+        if which.size:
+            matrix = self.matrix[self.place[rows[which]]]
+            white_residual[which] = (matrix @ residual[which][:, :, None])[:, :, 0]
+            white_derivative[which] = (matrix @ derivative[which].transpose(0, 2, 1)).transpose(0, 2, 1)
+        return white_residual, white_derivative
+
+    def _noise(self, channel: int, parameters: FloatArray) -> Noise:
+        """Noise of one channel from its plateaus, with the tails of the edges taken off."""
+        look, (first, last) = self.looks[channel], self.bounds[channel : channel + 2]
+        signal, cut = look.record.signal_V, self.cut
+        rest: list[FloatArray] = []
+        left = MOST_REST
+        unit = cut.unit
+        for row in range(int(first), int(last)):
+            place, tau, s, _, swing = parameters[row]
+            tau, s = float(np.exp(tau)) * unit[row], float(np.exp(s)) * unit[row]
+            origin = cut.quarter[row, 1] + float(place) * unit[row] - tau
+            if row == first:
+                end = int(max(origin - 4 * s, 0.0))
+                rest.append(signal[max(end - left, 0) : end])
+            begin = int(np.ceil(origin + 4 * s + 3 * tau)) + 1
+            end = int(cut.window[row, 1]) if row + 1 < last else signal.size
+            end = min(end, begin + left)
+            if end - begin >= 4:
+                tail = (
+                    np.exp(np.minimum(origin - np.arange(begin, end), 0.0) / tau + 0.5 * (s / tau) ** 2)
+                    if tau > max(0.2, s / 3)
+                    else 0.0
+                )
+                rest.append(signal[begin:end] + (1 if cut.rising[row] else -1) * swing * cut.amplitude_V[row] * tail)
+            left -= sum(part.size for part in rest[-1:])
+            if left < 64:
+                break
+        noise = rest_noise(rest, fallback_V=look.hiss_V)
+        self.dying[channel] = _dies_down(rest, noise)
+        return noise
+
+    def _joined(
+        self, rivals: Sequence[tuple[WhiteFits, FloatArray]], noises: Sequence[Noise]
+    ) -> list[SettledChannel | None]:
+        """Join the levels of each channel, put its edges on them, and hold what is left against the noise."""
+        cut, n = self.cut, len(self.looks)
+        weights = np.stack([weight for _, weight in rivals])
+        best = np.argmax(weights, axis=0)
+        parted = [self._parted(fit) for fit, _ in rivals]
+        row = np.arange(best.size)
+        low_high = np.stack([p.low_high_V for p in parted])[best, row]
+        information = np.stack([p.information for p in parted])[best, row]
+        total, pulled = np.zeros((n, 2, 2)), np.zeros((n, 2))
+        np.add.at(total, cut.channel, information)
+        np.add.at(pulled, cut.channel, (information @ low_high[:, :, None])[:, :, 0])
+        covariance = np.linalg.inv(total)
+        joint = (covariance @ pulled[:, :, None])[:, :, 0]
+        away = joint[cut.channel] - low_high
+        disagree = np.bincount(cut.channel, np.einsum("ei,eij,ej->e", away, information, away), n)
+        freedom = 2.0 * np.diff(self.bounds) - 2
+        agrees = disagree - freedom <= MISFIT * np.sqrt(2 * np.maximum(freedom, 1)) + 4
+        residual = np.stack([fit.residual for fit, _ in rivals])[best, row]
+        good = np.ones(n, dtype=np.bool_)
+        np.logical_and.at(good, cut.channel, np.stack([fit.good for fit, _ in rivals])[best, row])
+        good &= agrees & self._fits_well(residual) & ~self.dying
+        members = [
+            p.on_levels(fit.parameters, joint[cut.channel], weight)
+            for p, (fit, weight) in zip(parted, rivals, strict=True)
+        ]
+        found: list[SettledChannel | None] = []
+        for k, (look, noise) in enumerate(zip(self.looks, noises, strict=True)):
+            low, high = float(joint[k, 0]), float(joint[k, 1])
+            if noise.correlation.size > 1 and noise.independent < LEAST_INDEPENDENT:
+                good[k] = False  # noise as slow as the plateaus are long may as well be a tail
+            if not good[k] or high - low <= max(5.0 * noise.sigma_V, 2.0 * look.step_V):
+                found.append(None)
+                continue
+            u_code = u_quantised_V(noise.sigma_V, look.step_V)
+            u = np.sqrt(np.diagonal(covariance[k]) + u_code**2)
+            levels = StateLevels(low_V=low, high_V=high, u_low_V=float(u[0]), u_high_V=float(u[1]))
+            rows = slice(int(self.bounds[k]), int(self.bounds[k + 1]))
+            of_channel = tuple(member.select(rows) for member in members)
+            found.append(
+                SettledChannel(
+                    levels=levels, noise=noise,
+                    edges=self._edges(rows, look, levels, float(self.sigma_V[k]), of_channel),
+                )
+            )  # fmt: skip
+        return found
+
+    def _parted(self, fits: WhiteFits) -> _Parted:
+        """What a fit says of the levels of each edge, and of its shape once the levels are known."""
+        covariance = fits.inverse * (self.sigma**2)[:, None, None]
+        to_ends = np.array([[1.0, 0.0], [1.0, 1.0]])  # level before the edge, level after it
+        ends = fits.parameters[:, START : SWING + 1] @ to_ends.T
+        information = np.linalg.inv(to_ends @ covariance[:, START:, START:] @ to_ends.T + 1e-18 * np.eye(2))
+        with_shape = covariance[:, :START, START:] @ to_ends.T
+        gain = with_shape @ information
+        low_high, information_V, per_volt = self._in_volts(ends, information)
+        return _Parted(
+            low_high_V=low_high, information=information_V, by_volts=gain @ per_volt,
+            given=covariance[:, :START, :START] - gain @ with_shape.transpose(0, 2, 1),
+        )  # fmt: skip
+
+    def _in_volts(self, ends: FloatArray, information: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Low and high level of each edge (n, 2), their information (n, 2, 2), and progress per volt of both (n, 2, 2)."""
+        cut = self.cut
+        amplitude, low = cut.amplitude_V, cut.low_V
+        sign = np.where(cut.rising, 1.0, -1.0)
+        base = np.where(cut.rising, low, low + amplitude)
+        volts = base[:, None] + (sign * amplitude)[:, None] * ends
+        swap = np.where(cut.rising[:, None, None], np.eye(2), np.eye(2)[::-1])  # from before-and-after to low-and-high
+        per_volt = swap * (sign / amplitude)[:, None, None]
+        low_high = np.where(cut.rising[:, None], volts, volts[:, ::-1])
+        return low_high, per_volt.transpose(0, 2, 1) @ information @ per_volt, per_volt
+
+    def _fits_well(self, residual: FloatArray) -> BoolArray:
+        """Whether what the fits leave is no more than noise: lumped over the edges of each direction, and bin by bin."""
+        cut, bins, sigma = self.cut, self.bins, self.sigma
+        n = len(self.looks)
+        group = 2 * cut.channel + cut.rising
+        chi2 = np.bincount(group, np.sum(residual**2, axis=1) / sigma**2, 2 * n)
+        freedom = np.maximum(np.bincount(group, self.entries - 5, 2 * n), 1.0)
+        coloured = self.place >= 0
+        allowed = 1.25 * MISFIT  # the noise itself is known to a few per cent only
+        fine = (chi2 - freedom) / np.sqrt(2 * freedom + (0.06 * freedom) ** 2) <= allowed
+        lump = np.searchsorted(LUMPS, bins.x)
+        place = group[:, None] * (LUMPS.size + 1) + lump
+        raw = residual * self.root
+        weight = np.where(coloured[:, None], 0.0, bins.count.astype(np.float64))
+        sums = np.bincount(place.ravel(), (raw * (weight > 0)).ravel(), 2 * n * (LUMPS.size + 1))
+        counts = np.bincount(place.ravel(), weight.ravel(), 2 * n * (LUMPS.size + 1))
+        each = np.bincount(group, sigma**2, 2 * n) / np.maximum(np.bincount(group, minlength=2 * n), 1)
+        filled = counts > 0
+        variance = np.repeat(each, LUMPS.size + 1) / np.maximum(counts, 1) + FINEST_RATIO**2
+        lumps = np.where(filled, (sums / np.maximum(counts, 1)) ** 2 / np.maximum(variance, 1e-300), 0.0)
+        lumped = lumps.reshape(2 * n, -1).sum(axis=1)
+        dof = np.maximum(filled.reshape(2 * n, -1).sum(axis=1) - 4.0, 1.0)
+        coarse = (lumped - dof) / np.sqrt(2 * dof) <= MISFIT
+        both = fine & coarse
+        return np.asarray(both[0::2] & both[1::2])
+
+    def _edges(
+        self,
+        rows: slice,
+        look: FirstLook,
+        levels: StateLevels,
+        sigma_V: float,
+        families: tuple[FamilyMember, ...],
+    ) -> SettledEdges:
+        cut = self.cut
+        step, start = look.record.dt_s, look.record.t0_s
+        quarter, unit, rising = cut.quarter[rows], cut.unit[rows], cut.rising[rows]
+        n_samples = (np.floor(quarter[:, 2]) - np.floor(quarter[:, 0])).astype(np.intp)
+        few = np.flatnonzero(n_samples < ENOUGH_TO_FIT)
+        first = np.clip(np.floor(quarter[few, 1]).astype(np.intp) - 5, 0, look.record.signal_V.size - 12)
+        if look.record.signal_V.size < 12:
+            few = few[:0]
+            first = first[:0]
+        upward = (look.record.signal_V[first[:, None] + np.arange(12)] - levels.low_V) / levels.amplitude_V
+        straight = StraightLines(
+            rows=few, progress=np.where(rising[few][:, None], upward, 1.0 - upward), start_s=start + step * first,
+            step_s=step, sigma=sigma_V / levels.amplitude_V, amplitude_V=levels.amplitude_V,
+        )  # fmt: skip
+        return SettledEdges(
+            rising=rising, families=families, origin_s=start + step * quarter[:, 1], unit_s=step * unit, n_samples=n_samples, straight=straight,
+        )  # fmt: skip
