@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from bisect import bisect_left
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from datetime import date, datetime
 
@@ -13,11 +13,18 @@ from darkedge.analysis.dark.traces import TraceSummary, summarise_trace
 from darkedge.analysis.errors import DarkedgeError
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
-from darkedge.analysis.waveform.measure import measure_pulse_capture
+from darkedge.analysis.waveform.measure import measure_pulse_capture, measure_pulse_captures
 from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels
 
 FixtureFor = Callable[[str], Fixture]
 """Gives the fixture that holds for a capture, by the capture's name."""
+
+
+GROUP = 32
+"""Captures that are read and measured together."""
+
+MOST_SAMPLES = 2_000_000
+"""Samples of outputs beyond which a group is measured in parts, so that memory stays that of a few captures."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -91,28 +98,77 @@ def measure_captures(
     """
     found: list[Measurement | StillTrace] = []
     failures: list[Failure] = []
-    for capture in captures:
-        try:
-            found.extend(measure_one(capture, fixture_for(capture.name), reference))
-        except DarkedgeError as error:
-            failures.append(Failure(capture=capture.name, error=error))
-            found.append(refused_measurement(capture.name))
+    for group in _in_groups(captures):
+        measured = measure_group([(capture, fixture_for(capture.name)) for capture in group], reference)
+        for capture, result in zip(group, measured, strict=True):
+            if isinstance(result, DarkedgeError):
+                failures.append(Failure(capture=capture.name, error=result))
+                found.append(refused_measurement(capture.name))
+            else:
+                found.extend(result)
     return finish_measuring(found, fixture_for=fixture_for, today=today), failures
 
 
-def measure_one(
-    capture: Capture, fixture: Fixture, reference: ReferenceLevels = TEN_FIFTY_NINETY
-) -> Sequence[Measurement | StillTrace]:
-    """Measure one capture as far as it goes by itself: a still trace waits for the offset traces of its run.
+def _in_groups(captures: Iterable[Capture]) -> Iterator[list[Capture]]:
+    group: list[Capture] = []
+    for capture in captures:
+        group.append(capture)
+        if len(group) == GROUP:
+            yield group
+            group = []
+    if group:
+        yield group
 
-    Raises
-    ------
-    DarkedgeError
-        The capture cannot be measured.
+
+def measure_group(
+    captures: Sequence[tuple[Capture, Fixture]], reference: ReferenceLevels = TEN_FIFTY_NINETY
+) -> list[Sequence[Measurement | StillTrace] | DarkedgeError]:
+    """Measure a few captures together, as far as they go by themselves; one that cannot be measured has its error in its place.
+
+    Captures are taken together as long as they hold less than two million samples.
     """
-    if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
+    found: list[Sequence[Measurement | StillTrace] | DarkedgeError] = [()] * len(captures)
+    pulses: list[int] = []
+    held = 0
+    for place, (capture, _) in enumerate(captures):
+        if capture.conditions.kind in (Kind.DARK, Kind.OFFSET):
+            found[place] = _summaries_or_error(capture)
+            continue
+        pulses.append(place)
+        held += sum(record.signal_V.size for record in capture.outputs.values())
+        if held > MOST_SAMPLES:
+            _measure_pulses(captures, pulses, reference, found)
+            pulses, held = [], 0
+    _measure_pulses(captures, pulses, reference, found)
+    return found
+
+
+def _measure_pulses(
+    captures: Sequence[tuple[Capture, Fixture]],
+    places: Sequence[int],
+    reference: ReferenceLevels,
+    found: list[Sequence[Measurement | StillTrace] | DarkedgeError],
+) -> None:
+    """Measure the pulse captures at some places; where one of them raises, each by itself."""
+    try:
+        for place, rows in zip(
+            places, measure_pulse_captures([captures[k] for k in places], reference=reference), strict=True
+        ):
+            found[place] = rows
+    except DarkedgeError:
+        for place in places:
+            capture, fixture = captures[place]
+            try:
+                found[place] = measure_pulse_capture(capture, fixture=fixture, reference=reference)
+            except DarkedgeError as error:
+                found[place] = error
+
+
+def _summaries_or_error(capture: Capture) -> Sequence[StillTrace] | DarkedgeError:
+    try:
         return _summaries(capture)
-    return measure_pulse_capture(capture, fixture=fixture, reference=reference)
+    except DarkedgeError as error:
+        return error
 
 
 def finish_measuring(

@@ -25,7 +25,7 @@ from darkedge.analysis.files.runs import RunContext, read_run_context
 from darkedge.analysis.files.tables import is_table, read_table
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
-from darkedge.analysis.measuring import StillTrace, finish_measuring, measure_one, refused_measurement
+from darkedge.analysis.measuring import GROUP, StillTrace, finish_measuring, measure_group, refused_measurement
 from darkedge.analysis.plan import Plan
 from darkedge.analysis.waveform.measure import measure_pulse_capture
 from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels
@@ -210,16 +210,19 @@ def take_each(reading: _Reading, *, jobs: int) -> Iterator[Taken]:
         `jobs` is below 1.
     """
     names = list(reading.sources)
+    groups = [names[k : k + GROUP] for k in range(0, len(names), GROUP)]
     if jobs < 1:
         raise InputError("jobs is not a number of processes", found=str(jobs), wanted="1 or more")
-    if jobs == 1 or len(names) < 2 * jobs:
-        yield from map(reading.take, names)
+    if jobs == 1 or len(groups) < 2:
+        for group in groups:
+            yield from reading.take(group)
         return
     # Copying this process is quick, but safe only where no other thread runs; else each starts afresh.
     quick = sys.platform == "linux" and threading.active_count() == 1
     context = multiprocessing.get_context("fork" if quick else "spawn")
     with ProcessPoolExecutor(jobs, mp_context=context, initializer=_begin_work, initargs=(reading,)) as pool:
-        yield from pool.map(_take_in_worker, names, chunksize=min(32, max(1, len(names) // (8 * jobs))))
+        for taken in pool.map(_take_in_worker, groups):
+            yield from taken
 
 
 _WORK: list[_Reading] = []
@@ -230,8 +233,8 @@ def _begin_work(reading: _Reading) -> None:
     _WORK[:] = [reading]
 
 
-def _take_in_worker(name: str) -> Taken:
-    return _WORK[0].take(name)
+def _take_in_worker(names: Sequence[str]) -> list[Taken]:
+    return _WORK[0].take(names)
 
 
 class _Reading:
@@ -268,17 +271,33 @@ class _Reading:
             self._archived[source.path] = archive_fixtures(source.path)
         return self._archived[source.path][source.place]
 
-    def take(self, name: str) -> Taken:
-        """Read and measure one source; never raises for it."""
+    def take(self, names: Sequence[str]) -> list[Taken]:
+        """Read and measure some sources together; never raises for one of them."""
+        loaded = [self._loaded(name) for name in names]
+        together = [
+            (item, self.fixtures.get(item.name, UNKNOWN_FIXTURE)) for item in loaded if isinstance(item, Capture)
+        ]
+        measured = iter(measure_group(together, self.reference))
+        return [
+            self._taken(name, next(measured) if isinstance(item, Capture) else item)
+            for name, item in zip(names, loaded, strict=True)
+        ]
+
+    def _loaded(self, name: str) -> Capture | DarkedgeError:
         item = self._load(self.sources[name])
+        if isinstance(item, Refusal):
+            return item.error
         try:
-            if isinstance(item, Refusal):
-                raise item.error
-            fixture = self.fixtures.get(name, UNKNOWN_FIXTURE)
-            return Taken(rows=tuple(measure_one(self._in_its_run(item), fixture, self.reference)))
+            return self._in_its_run(item)
         except DarkedgeError as error:
-            named = error if isinstance(item, Refusal) else error.at(name)
-            return Taken(rows=(refused_measurement(name),), refused=Refused(name=name, error=named))
+            return error.at(name)
+
+    @staticmethod
+    def _taken(name: str, found: Sequence[Measurement | StillTrace] | DarkedgeError) -> Taken:
+        if not isinstance(found, DarkedgeError):
+            return Taken(rows=tuple(found))
+        error = found if found.where else found.at(name)
+        return Taken(rows=(refused_measurement(name),), refused=Refused(name=name, error=error))
 
     def again(self, name: str) -> Capture:
         """Read one capture again, for a picture of it."""

@@ -18,6 +18,9 @@ GROUPS = 64
 """Groups that a window about an edge is first looked at in."""
 
 BEFORE_BINS, EDGE_BINS, AFTER_BINS = 5, 44, 13
+FINE = slice(BEFORE_BINS, BEFORE_BINS + EDGE_BINS)
+"""The bins across the edge."""
+
 REACH_BEFORE, REACH_AFTER = 0.9, 1.4
 """How far the fine bins reach before 10 % and after 90 %, in edge times."""
 
@@ -206,6 +209,11 @@ class BinnedEdges:
     high: FloatArray
 
     @property
+    def bounds(self) -> FloatArray:
+        """Bounds of the bins, which are neighbours; shape (n, m + 1)."""
+        return np.concatenate((self.low[:, :1], self.high), axis=1)
+
+    @property
     def x(self) -> FloatArray:
         """Mean place of the samples of each bin."""
         return 0.5 * (self.low + self.high)
@@ -220,7 +228,7 @@ class BinnedEdges:
     @property
     def fine_count(self) -> FloatArray:
         """Samples in a bin across the edge; shape (n,)."""
-        return np.asarray(np.max(self.count[:, BEFORE_BINS : BEFORE_BINS + EDGE_BINS], axis=1), dtype=np.float64)
+        return np.asarray(np.max(self.count[:, FINE], axis=1), dtype=np.float64)
 
 
 def bin_edges(edges: CutEdges) -> BinnedEdges:

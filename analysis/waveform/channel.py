@@ -92,15 +92,17 @@ def measure_channels(
     looks = [look_at(record, volts_per_code=step) for record, step in zip(records, volts_per_code, strict=True)]
     even = [k for k, look in enumerate(looks) if look is not None and look.is_even]
     found: list[Channel | None] = [None] * len(records)
-    settled = dict(zip(even, fit_settled([look for k in even if (look := looks[k]) is not None]), strict=True))
+    settled = dict(
+        zip(even, fit_settled([look for k in even if (look := looks[k]) is not None], fractions), strict=True)
+    )
     for k, look in enumerate(looks):
         if look is not None:
             fit = settled.get(k)
-            found[k] = _one_by_one(look, fractions) if fit is None else _of_settled(look, fit, fractions)
+            found[k] = _one_by_one(look, fractions) if fit is None else _of_settled(look, fit)
     return found
 
 
-def _of_settled(look: FirstLook, fit: SettledChannel, fractions: tuple[float, ...]) -> Channel:
+def _of_settled(look: FirstLook, fit: SettledChannel) -> Channel:
     """A channel as the joint fit found it; what the fit passed has neither droop nor ringing beyond its noise."""
     levels, sigma = fit.levels, fit.noise.sigma_V
     low, high = (
@@ -108,7 +110,7 @@ def _of_settled(look: FirstLook, fit: SettledChannel, fractions: tuple[float, ..
         for level, u in ((levels.low_V, levels.u_low_V), (levels.high_V, levels.u_high_V))
     )
     return Channel(
-        levels=levels, noise=fit.noise, transitions=fit.edges.transitions(fractions), changes=look.changes, low=low,
+        levels=levels, noise=fit.noise, transitions=fit.transitions, changes=look.changes, low=low,
         high=high, step_V=look.step_V, hiss_V=look.hiss_V, start_s=look.record.t0_s, end_s=_end_s(look.record),
         settled=fit.edges,
     )  # fmt: skip

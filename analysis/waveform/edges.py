@@ -67,6 +67,14 @@ class Transitions:
     n_samples: IntArray
     by_shape: BoolArray
 
+    def select(self, rows: slice) -> Transitions:
+        """Some neighbouring edges."""
+        return Transitions(
+            fractions=self.fractions, rising=self.rising[rows], time_s=self.time_s[rows],
+            covariance_s2=self.covariance_s2[rows], bend_s=self.bend_s[rows], pull_s_per_V=self.pull_s_per_V[rows],
+            n_samples=self.n_samples[rows], by_shape=self.by_shape[rows],
+        )  # fmt: skip
+
     @property
     def u_time_s(self) -> FloatArray:
         """Standard uncertainty of each instant from noise and sampling, the levels taken as known; shape (n, m)."""

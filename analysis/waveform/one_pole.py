@@ -53,15 +53,18 @@ def by_points(x: FloatArray, blur: FloatArray, parameters: FloatArray) -> tuple[
     )
 
 
-def by_means(low: FloatArray, high: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Values (n, m) and derivatives (n, 5, m) of bins that hold the mean of many samples."""
+def by_means(bounds: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Values (n, m) and derivatives (n, 5, m) of neighbouring bins that hold means; `bounds` (n, m + 1) on the x axis.
+
+    An empty bin, of no width, has the value 0.
+    """
     x0, tau, s, start, swing = _unpacked(parameters)
-    size = high - low
-    safe = np.where(size > 0, size, 1.0)
-    both = [_running(edge, x0, tau, s) for edge in (low, high)]
-    value, by_x0, by_tau, by_s = ((b - a) / safe for a, b in zip(*both, strict=True))
-    return start + swing * value, np.stack(
-        (swing * by_x0, swing * (by_tau - tau * by_x0), swing * by_s, np.ones_like(value), value), axis=1
+    size = np.diff(bounds, axis=1)
+    share = 1.0 / np.where(size > 0, size, np.inf)
+    value, by_x0, by_tau, by_s = (np.diff(part, axis=1) * share for part in _running(bounds, x0, tau, s))
+    filled = (size > 0).astype(np.float64)
+    return start * filled + swing * value, np.stack(
+        (swing * by_x0, swing * (by_tau - tau * by_x0), swing * by_s, filled, value), axis=1
     )
 
 
@@ -92,19 +95,18 @@ def instants(parameters: FloatArray, shares: FloatArray, first: FloatArray) -> t
     gradient : array, shape (n, k, 3)
     """
     x0, tau, s, _, _ = _unpacked(parameters)
-    low, high = x0 - 9 * s, x0 + 9 * s + tau * (1 - np.log1p(-shares))
+    low, high = np.tile(x0 - 9 * s, (1, shares.shape[1])), x0 + 9 * s + tau * (1 - np.log1p(-shares))
     x = np.clip(first, low, high)
-    done = np.zeros(x.shape, dtype=np.bool_)
-    for _ in range(
-        40
-    ):  # Newton's method, kept inside a bracket that shrinks; what is found stays, whatever the others need
-        value, rest, _, _ = parts(x, x0, tau, s)
-        below = value < shares
-        low, high = np.where(below, x, low), np.where(below, high, x)
-        step = x + (shares - value) * tau / np.maximum(rest, 1e-300)
-        new = np.where((step > low) & (step < high), step, 0.5 * (low + high))
-        x, done = np.where(done, x, new), done | (np.abs(new - x) <= 1e-10 * (s + tau))
-        if bool(np.all(done)):
+    rows = np.arange(x.shape[0])
+    for _ in range(60):  # Newton's method, kept inside a bracket that shrinks; a row that is found is left alone
+        at, x0_, tau_, s_, wanted = x[rows], x0[rows], tau[rows], s[rows], shares[rows]
+        value, rest, _, _ = parts(at, x0_, tau_, s_)
+        below = value < wanted
+        low[rows], high[rows] = np.where(below, at, low[rows]), np.where(below, high[rows], at)
+        step = at + (wanted - value) * tau_ / np.maximum(rest, 1e-300)
+        x[rows] = np.where((step > low[rows]) & (step < high[rows]), step, 0.5 * (low[rows] + high[rows]))
+        rows = rows[np.any(np.abs(x[rows] - at) > 1e-9 * (s_ + tau_), axis=1)]
+        if rows.size == 0:
             break
     value, rest, bell, u = parts(x, x0, tau, s)
     slope = np.maximum(rest / tau, 1e-12)

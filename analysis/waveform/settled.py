@@ -17,8 +17,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from darkedge.analysis.captures import FloatArray
-from darkedge.analysis.waveform.binned import BinnedEdges, CutEdges, bin_edges, cut_edges
-from darkedge.analysis.waveform.edges import BoolArray, IntArray, Transitions
+from darkedge.analysis.waveform.binned import FINE, BinnedEdges, CutEdges, bin_edges, cut_edges
+from darkedge.analysis.waveform.edges import TEN_NINETY, BoolArray, IntArray, Transitions
 from darkedge.analysis.waveform.first_look import FirstLook
 from darkedge.analysis.waveform.least_squares import WhiteFits, fit_white_rows
 from darkedge.analysis.waveform.levels import StateLevels
@@ -67,6 +67,9 @@ BETWEEN = 0.7
 """What the course of an edge between its samples leaves open, in edge times over the cube of the number of samples on the edge: between
 two family members that agree on the samples."""
 
+BESIDE = 6
+"""Samples on either side of the 50 % point among which straight lines are drawn."""
+
 FEWEST_TO_FIT, ENOUGH_TO_FIT = 2, 4
 """Samples between 10 and 90 %: below the first a straight line between two is all there is; from the second the fit stands."""
 
@@ -101,6 +104,14 @@ class SettledEdges:
             n_samples=self.n_samples, by_shape=np.ones(n, dtype=np.bool_),
         )  # fmt: skip
         return self.straight.instead(found) if self.straight.rows.size else found
+
+    def select(self, rows: slice) -> SettledEdges:
+        """Some neighbouring edges."""
+        return SettledEdges(
+            rising=self.rising[rows], families=tuple(member.select(rows) for member in self.families),
+            origin_s=self.origin_s[rows], unit_s=self.unit_s[rows], n_samples=self.n_samples[rows],
+            straight=self.straight.select(rows),
+        )  # fmt: skip
 
     def _averaged(self, shares: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Instants, covariance and pull as means over the family members; that members differ adds to the covariance.
@@ -154,14 +165,22 @@ class FamilyMember:
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class StraightLines:
-    """Edges with few samples, `rows` of them: progress (n, m) at samples `step_s` apart from `start_s` (n,) on, and the noise."""
+    """Edges with few samples, `rows` of them: progress (n, m) at samples `step_s` apart from `start_s` on, noise and amplitude, all (n,)."""
 
     rows: IntArray
     progress: FloatArray
     start_s: FloatArray
-    step_s: float
-    sigma: float
-    amplitude_V: float
+    step_s: FloatArray
+    sigma: FloatArray
+    amplitude_V: FloatArray
+
+    def select(self, rows: slice) -> StraightLines:
+        """Those of some neighbouring edges, counted from the first of them."""
+        some = (self.rows >= rows.start) & (self.rows < rows.stop)
+        return StraightLines(
+            rows=self.rows[some] - rows.start, progress=self.progress[some], start_s=self.start_s[some],
+            step_s=self.step_s[some], sigma=self.sigma[some], amplitude_V=self.amplitude_V[some],
+        )  # fmt: skip
 
     def instead(self, found: Transitions) -> Transitions:
         """Put straight lines between two samples wherever they are better known than the fit."""
@@ -205,9 +224,10 @@ class SettledChannel:
     levels: StateLevels
     noise: Noise
     edges: SettledEdges
+    transitions: Transitions
 
 
-def fit_settled(looks: Sequence[FirstLook]) -> list[SettledChannel | None]:
+def fit_settled(looks: Sequence[FirstLook], fractions: tuple[float, ...] = TEN_NINETY) -> list[SettledChannel | None]:
     """Fit channels of even records together; `None` for one that does not settle or is not of the family."""
     if not looks:
         return []
@@ -223,7 +243,7 @@ def fit_settled(looks: Sequence[FirstLook]) -> list[SettledChannel | None]:
     job = _Job(
         looks=[looks[k] for k in kept], cut=cut.select(rows, channel=renumbered[cut.channel[rows]].astype(np.intp))
     )
-    for k, channel in zip(kept, job.channels(), strict=True):
+    for k, channel in zip(kept, job.channels(fractions), strict=True):
         found[int(k)] = channel
     return found
 
@@ -275,27 +295,43 @@ class _Job:
         self.looks, self.cut = looks, cut
         self.bins: BinnedEdges = bin_edges(cut)
         self.means = self.bins.fine_count >= MEAN_FROM
+        self.bounds_x = self.bins.bounds
+        self.fine_x, self.fine_blur = self.bins.x[:, FINE], self.bins.blur[:, FINE]
         self.root = np.sqrt(self.bins.count.astype(np.float64))
         self.entries = np.count_nonzero(self.bins.count, axis=1).astype(np.float64)
         self.bounds = np.searchsorted(cut.channel, np.arange(len(looks) + 1))
+        self.n_samples = (np.floor(cut.quarter[:, 2]) - np.floor(cut.quarter[:, 0])).astype(np.intp)
         self.coloured = np.empty(0, dtype=np.intp)
         self.place = np.full(cut.channel.size, -1)
         self.matrix = np.empty((0, 0, 0))
         self.sigma_V, self.sigma = np.empty(0), np.empty(0)
         self.dying = np.zeros(len(looks), dtype=np.bool_)
 
-    def channels(self) -> list[SettledChannel | None]:
+    def channels(self, fractions: tuple[float, ...]) -> list[SettledChannel | None]:
         quarter = (self.cut.quarter - self.cut.quarter[:, 1:2]) / self.cut.unit[:, None]
         shape = first_guess(quarter)
         shape[:, PLACE] += np.exp(shape[:, LN_TAU])
         start = np.concatenate((shape, np.zeros((shape.shape[0], 1)), np.ones((shape.shape[0], 1))), axis=1)
-        every = np.arange(start.shape[0])
-        fits = self._fit(start, every)
+        fits = self._fit_all(start)
         noises = [self._noise(k, fits.parameters) for k in range(len(self.looks))]
         self._whiten(noises)
         if self.coloured.size:
             fits = _put(fits, self._fit(fits.parameters[self.coloured], self.coloured), self.coloured)
-        return self._joined(self._rivals(fits), noises)
+        return self._joined(self._rivals(fits), noises, fractions)
+
+    def _fit_all(self, start: FloatArray) -> WhiteFits:
+        """Fit every edge; the shape of one with hardly a sample on it is a Gaussian edge of some width, or of none."""
+        sharp = np.flatnonzero(self.n_samples < FEWEST_TO_FIT)
+        start[sharp, LN_TAU] = np.log(NARROWEST)
+        every = np.arange(start.shape[0])
+        if sharp.size == 0:
+            return self._fit(start, every)
+        soft = np.flatnonzero(self.n_samples >= FEWEST_TO_FIT)
+        fits = [self._fit(start[sharp], sharp, held=LN_TAU)] + ([self._fit(start[soft], soft)] if soft.size else [])
+        order = np.argsort(np.concatenate((sharp, soft)))
+        return WhiteFits(**{
+            name: np.concatenate([getattr(fit, name) for fit in fits])[order] for name in WhiteFits.__dataclass_fields__
+        })  # fmt: skip
 
     def _whiten(self, noises: Sequence[Noise]) -> None:
         """Hold the noise of each channel: its size, and matrices that whiten the bins where it is not white."""
@@ -312,41 +348,49 @@ class _Job:
 
     def _rivals(self, fits: WhiteFits) -> list[tuple[WhiteFits, FloatArray]]:
         """The whole family and its two simpler members, one pole alone and a Gaussian edge alone, each with its Akaike weight (n,)."""
-        rows = np.arange(fits.parameters.shape[0])
-        found = [(fits, np.zeros(rows.size))]
+        rows = np.flatnonzero(self.n_samples >= FEWEST_TO_FIT)
+        found = [fits]
         width = np.exp(fits.parameters[:, LN_TAU : LN_S + 1])
         spread = np.hypot(width[:, 0], width[:, 1])
         for held, other in ((LN_S, LN_TAU), (LN_TAU, LN_S)):
             start = fits.parameters.copy()
             start[:, held] = np.log(NARROWEST)
             start[:, other] = np.log(np.clip(spread, NARROWEST, WIDEST))
-            found.append((self._fit(bounded(start), rows, held=held), np.zeros(rows.size)))
+            found.append(_put(fits, self._fit(bounded(start)[rows], rows, held=held), rows))
         criterion = np.stack([
             np.where(fit.good, np.sum(fit.residual**2, axis=1) / self.sigma**2 + 2 * (k == 0), np.inf)
-            for k, (fit, _) in enumerate(found)
+            for k, fit in enumerate(found)
         ])  # fmt: skip
-        criterion -= np.min(np.where(np.isfinite(criterion), criterion, 1e300), axis=0)
-        weight = np.exp(-0.5 * np.minimum(criterion, 1e3))
+        criterion[1:, self.n_samples < FEWEST_TO_FIT] = np.inf
+        least = np.min(criterion, axis=0)
+        weight = np.exp(-0.5 * np.minimum(criterion - np.where(np.isfinite(least), least, 0.0), 1e3))
         weight = np.where(weight < LEAST_WEIGHT, 0.0, weight)
-        weight /= np.maximum(np.sum(weight, axis=0), 1e-300)
-        return [(fit, weight[k]) for k, (fit, _) in enumerate(found)]
+        weight[0, ~np.any(weight > 0, axis=0)] = 1.0
+        weight /= np.sum(weight, axis=0)
+        return list(zip(found, weight, strict=True))
 
     def _model(self, rows: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Values and derivatives of the bins of some edges."""
-        bins, means = self.bins, self.means[rows]
+        means = self.means[rows]
         if bool(np.all(means)):
-            return by_means(bins.low[rows], bins.high[rows], parameters)
+            return by_means(self.bounds_x[rows], parameters)
         if not bool(np.any(means)):
-            return by_points(bins.x[rows], bins.blur[rows], parameters)
-        value = np.empty((rows.size, bins.y.shape[1]))
-        derivative = np.empty((rows.size, 5, bins.y.shape[1]))
-        for which, of in ((means, by_means), (~means, None)):
-            some = rows[which]
-            if of is None:
-                value[which], derivative[which] = by_points(bins.x[some], bins.blur[some], parameters[which])
-            else:
-                value[which], derivative[which] = of(bins.low[some], bins.high[some], parameters[which])
+            return self._of_points(rows, parameters)
+        value = np.empty((rows.size, self.bins.y.shape[1]))
+        derivative = np.empty((rows.size, 5, self.bins.y.shape[1]))
+        value[means], derivative[means] = by_means(self.bounds_x[rows[means]], parameters[means])
+        value[~means], derivative[~means] = self._of_points(rows[~means], parameters[~means])
         return value, derivative
+
+    def _of_points(self, rows: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Values and derivatives of bins that hold a sample or two across the edge, and means before and after it."""
+        bounds = self.bounds_x[rows]
+        parts = (
+            by_means(bounds[:, : FINE.start + 1], parameters),
+            by_points(self.fine_x[rows], self.fine_blur[rows], parameters),
+            by_means(bounds[:, FINE.stop :], parameters),
+        )
+        return np.concatenate([value for value, _ in parts], axis=1), np.concatenate([d for _, d in parts], axis=2)
 
     def _fit(self, start: FloatArray, rows: IntArray, *, held: int | None = None) -> WhiteFits:
         """Fit some edges, their bins whitened as far as the noise is known; the parameter `held` stays."""
@@ -406,7 +450,7 @@ class _Job:
         return noise
 
     def _joined(
-        self, rivals: Sequence[tuple[WhiteFits, FloatArray]], noises: Sequence[Noise]
+        self, rivals: Sequence[tuple[WhiteFits, FloatArray]], noises: Sequence[Noise], fractions: tuple[float, ...]
     ) -> list[SettledChannel | None]:
         """Join the levels of each channel, put its edges on them, and hold what is left against the noise."""
         cut, n = self.cut, len(self.looks)
@@ -429,29 +473,33 @@ class _Job:
         good = np.ones(n, dtype=np.bool_)
         np.logical_and.at(good, cut.channel, np.stack([fit.good for fit, _ in rivals])[best, row])
         good &= agrees & self._fits_well(residual) & ~self.dying
-        members = [
+        slow = np.array([n.correlation.size > 1 and n.independent < LEAST_INDEPENDENT for n in noises])
+        codes = np.array([look.step_V for look in self.looks])
+        swing = joint[:, 1] - joint[:, 0]
+        # Noise as slow as the plateaus are long may as well be a tail.
+        good &= ~slow & (swing > np.maximum(5.0 * np.array([n.sigma_V for n in noises]), 2.0 * codes))
+        members = tuple(
             p.on_levels(fit.parameters, joint[cut.channel], weight)
             for p, (fit, weight) in zip(parted, rivals, strict=True)
-        ]
+        )
+        edges = self._edges(joint, members)
+        transitions = edges.transitions(fractions)
         found: list[SettledChannel | None] = []
         for k, (look, noise) in enumerate(zip(self.looks, noises, strict=True)):
-            low, high = float(joint[k, 0]), float(joint[k, 1])
-            if noise.correlation.size > 1 and noise.independent < LEAST_INDEPENDENT:
-                good[k] = False  # noise as slow as the plateaus are long may as well be a tail
-            if not good[k] or high - low <= max(5.0 * noise.sigma_V, 2.0 * look.step_V):
+            if not good[k]:
                 found.append(None)
                 continue
             u_code = u_quantised_V(noise.sigma_V, look.step_V)
             u = np.sqrt(np.diagonal(covariance[k]) + u_code**2)
-            levels = StateLevels(low_V=low, high_V=high, u_low_V=float(u[0]), u_high_V=float(u[1]))
+            levels = StateLevels(
+                low_V=float(joint[k, 0]), high_V=float(joint[k, 1]), u_low_V=float(u[0]), u_high_V=float(u[1])
+            )
             rows = slice(int(self.bounds[k]), int(self.bounds[k + 1]))
-            of_channel = tuple(member.select(rows) for member in members)
             found.append(
                 SettledChannel(
-                    levels=levels, noise=noise,
-                    edges=self._edges(rows, look, levels, float(self.sigma_V[k]), of_channel),
+                    levels=levels, noise=noise, edges=edges.select(rows), transitions=transitions.select(rows)
                 )
-            )  # fmt: skip
+            )
         return found
 
     def _parted(self, fits: WhiteFits) -> _Parted:
@@ -506,28 +554,23 @@ class _Job:
         both = fine & coarse
         return np.asarray(both[0::2] & both[1::2])
 
-    def _edges(
-        self,
-        rows: slice,
-        look: FirstLook,
-        levels: StateLevels,
-        sigma_V: float,
-        families: tuple[FamilyMember, ...],
-    ) -> SettledEdges:
+    def _edges(self, joint: FloatArray, families: tuple[FamilyMember, ...]) -> SettledEdges:
+        """All edges on the joint levels of their channels."""
         cut = self.cut
-        step, start = look.record.dt_s, look.record.t0_s
-        quarter, unit, rising = cut.quarter[rows], cut.unit[rows], cut.rising[rows]
-        n_samples = (np.floor(quarter[:, 2]) - np.floor(quarter[:, 0])).astype(np.intp)
-        few = np.flatnonzero(n_samples < ENOUGH_TO_FIT)
-        first = np.clip(np.floor(quarter[few, 1]).astype(np.intp) - 5, 0, look.record.signal_V.size - 12)
-        if look.record.signal_V.size < 12:
-            few = few[:0]
-            first = first[:0]
-        upward = (look.record.signal_V[first[:, None] + np.arange(12)] - levels.low_V) / levels.amplitude_V
+        step = np.array([look.record.dt_s for look in self.looks])[cut.channel]
+        start = np.array([look.record.t0_s for look in self.looks])[cut.channel]
+        few = np.flatnonzero((self.n_samples < ENOUGH_TO_FIT) & (cut.length >= 2 * BESIDE))
+        first = np.clip(np.floor(cut.quarter[few, 1]).astype(np.intp) - BESIDE + 1, 0, cut.length[few] - 2 * BESIDE)
+        places = (cut.base[few] + first)[:, None] + np.arange(2 * BESIDE + 1)
+        volts = np.diff(cut.sums[places], axis=1) + cut.offset_V[few][:, None]
+        low, swing = joint[cut.channel[few], 0], joint[cut.channel[few], 1] - joint[cut.channel[few], 0]
+        upward = (volts - low[:, None]) / swing[:, None]
         straight = StraightLines(
-            rows=few, progress=np.where(rising[few][:, None], upward, 1.0 - upward), start_s=start + step * first,
-            step_s=step, sigma=sigma_V / levels.amplitude_V, amplitude_V=levels.amplitude_V,
+            rows=few, progress=np.where(cut.rising[few][:, None], upward, 1.0 - upward),
+            start_s=start[few] + step[few] * first, step_s=step[few], sigma=self.sigma_V[cut.channel[few]] / swing,
+            amplitude_V=swing,
         )  # fmt: skip
         return SettledEdges(
-            rising=rising, families=families, origin_s=start + step * quarter[:, 1], unit_s=step * unit, n_samples=n_samples, straight=straight,
+            rising=cut.rising, families=families, origin_s=start + step * cut.quarter[:, 1], unit_s=step * cut.unit,
+            n_samples=self.n_samples, straight=straight,
         )  # fmt: skip
