@@ -22,7 +22,7 @@ _SIGNATURES: Mapping[bytes, str] = {
     b"\x7fELF": "a program",
     b"MZ": "a program",
 }
-_TEXT_CONTROLS = b"\t\n\r\x0c\x1a"
+_NO_CONTROLS = bytes({*range(32, 256), *b"\t\n\r\x0c\x1a"})
 _SNIFF_BYTES = 8192
 
 
@@ -100,7 +100,7 @@ def _from_utf16(data: bytes, encoding: str, where: str) -> bytes:
 
 
 def _has_controls(data: bytes) -> bool:
-    return any(byte < 32 and byte not in _TEXT_CONTROLS for byte in set(data))
+    return bool(data.translate(None, delete=_NO_CONTROLS))
 
 
 def _not_text(where: str, found: str) -> CaptureError:

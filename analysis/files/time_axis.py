@@ -59,7 +59,10 @@ def time_axis(
         The time falls, or stands still and no stated step explains it.
     """
     steps = np.diff(stamps_s)
-    if bool(np.any(steps < 0)):
+    least, most = float(np.min(steps)), float(np.max(steps))
+    if least > 0 and most - least <= EVEN_RATIO * least:  # then all are that near to their median, too
+        return TimeAxis(t0_s=float(stamps_s[0]), dt_s=even_step(stamps_s))
+    if least < 0:
         raise _fault("the time goes back", stamps_s, int(np.flatnonzero(steps < 0)[0]) + 1)
     middle = float(np.median(steps))
     if middle > 0 and bool(np.all(np.abs(steps - middle) <= EVEN_RATIO * middle)):

@@ -9,7 +9,7 @@ import numpy as np
 from darkedge.analysis.captures import FloatArray, Record, TimedRecord
 from darkedge.analysis.waveform.edges import Changes, find_changes, smoothing_length
 from darkedge.analysis.waveform.levels import StateLevels, histogram_levels
-from darkedge.analysis.waveform.noise import code_step_V, difference_sigma
+from darkedge.analysis.waveform.noise import code_of_steps, sigma_of_steps, steps_between
 
 LEAST_WIDTH = 3
 """Samples that pulses, and the gaps between them, last at least in the median; what is shorter is noise or a glitch."""
@@ -38,7 +38,10 @@ class FirstLook:
 def look_at(record: Record, *, volts_per_code: float | None = None) -> FirstLook | None:
     """Look at a record; `None` where no pulse shows."""
     signal = record.signal_V
-    step, hiss = code_step_V(signal, volts_per_code), difference_sigma(signal)
+    steps = steps_between(signal)
+    lowest, highest = float(signal.min()), float(signal.max())
+    hiss = sigma_of_steps(steps, lambda: highest - lowest)
+    step = volts_per_code or code_of_steps(steps, lowest, highest)
     found = _levels_and_changes(signal, hiss)
     if found is None:
         return None

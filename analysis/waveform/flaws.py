@@ -24,20 +24,24 @@ TAIL_EXCESS = 1.15
 LEAST_STUCK = 5
 """Samples at the very extreme of a record from which it may be clipped."""
 
+LONG_FOR_PAIRS = 1024
+"""Samples from which the beginning of a record is looked at for pairs first."""
+
 QUIET_RATIO = 2e-4
 """Noise over amplitude below which a record is taken for computed, not captured."""
 
 
 def trace_flags(signal_V: FloatArray, time_s: FloatArray, channel: Channel) -> set[str]:
     """Flags that one channel's trace shows by itself."""
+    plain = channel.settled is not None  # what the joint fit passed has neither droop nor ringing nor a tail
     tests = {
         "clipped": is_clipped(signal_V, channel),
         "min_max_record": is_min_max(signal_V),
         "never_settles": not (channel.low.settled and channel.high.settled),
         "noise_unknown": not channel.noise.known,
-        "droop": any(_droops(plateau) for plateau in (channel.low, channel.high)),
-        "ringing": rings(signal_V, time_s, channel),
-        "slow_tail": has_slow_tail(channel),
+        "droop": not plain and any(_droops(plateau) for plateau in (channel.low, channel.high)),
+        "ringing": not plain and rings(signal_V, time_s, channel),
+        "slow_tail": not plain and has_slow_tail(channel),
         "few_samples_on_edge": bool(np.any(channel.transitions.n_samples < FEW_ON_EDGE)),
     }
     return {code for code, true in tests.items() if true}
@@ -49,29 +53,38 @@ def is_clipped(signal_V: FloatArray, channel: Channel) -> bool:
     A state is clipped where its samples repeat the very extreme of the record although the noise of the other state
     spreads over several codes: noise does not stop at a level by itself. A record without noise cannot tell.
     """
+    tolerance = 1e-6 * channel.levels.amplitude_V
+    top, bottom = float(np.max(signal_V)), float(np.min(signal_V))
+    if (
+        np.count_nonzero(signal_V >= top - tolerance) < LEAST_STUCK
+        and np.count_nonzero(signal_V <= bottom + tolerance) < LEAST_STUCK
+    ):
+        return False
     middle = 0.5 * (channel.levels.low_V + channel.levels.high_V)
     high, low = signal_V[signal_V > middle], signal_V[signal_V <= middle]
-    return _stuck(high, low, float(np.max(signal_V)), channel, channel.low.sigma_V) or _stuck(
-        low, high, float(np.min(signal_V)), channel, channel.high.sigma_V
+    return _stuck(high, low, top, channel, channel.low.sigma_V) or _stuck(
+        low, high, bottom, channel, channel.high.sigma_V
     )
 
 
 def _stuck(part: FloatArray, other: FloatArray, extreme: float, channel: Channel, noise_V: float) -> bool:
-    if other.size < ENOUGH_FLAT_SAMPLES:
+    tolerance = 1e-6 * channel.levels.amplitude_V
+    away = np.abs(part - extreme)
+    stuck = int(np.count_nonzero(away <= tolerance))
+    if other.size < ENOUGH_FLAT_SAMPLES or stuck < LEAST_STUCK:
         return False
     # Second differences tell noise from a tail that no fit describes; correlated noise makes them up to 4 times smaller.
     noise_V = min(noise_V, 4 * difference_sigma(np.diff(other)) / math.sqrt(3))
     if noise_V <= max(0.7 * channel.step_V, QUIET_RATIO * channel.levels.amplitude_V):
         return False
-    tolerance = 1e-6 * channel.levels.amplitude_V
-    away = np.abs(part - extreme)
-    stuck = int(np.sum(away <= tolerance))
     nearby = int(np.sum(away <= max(2.5 * channel.step_V, 0.5 * noise_V))) - stuck
-    return stuck >= LEAST_STUCK and stuck > 2 * nearby
+    return stuck > 2 * nearby
 
 
 def is_min_max(signal_V: FloatArray) -> bool:
     """Whether the record holds pairs of minimum and maximum: one sample of each pair is always the lower one."""
+    if signal_V.size > LONG_FOR_PAIRS and not is_min_max(signal_V[:LONG_FOR_PAIRS]):
+        return False  # a record that is pairs is pairs from its beginning
     even = signal_V.size // 2 * 2
     for start in (0, 1):
         pairs = signal_V[start : start + (even - 2 * start)].reshape(-1, 2)

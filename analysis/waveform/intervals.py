@@ -6,6 +6,7 @@ alike and does not. Both are carried until the last step, where they are put tog
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -43,6 +44,9 @@ class Instants:
     def mean(self) -> Interval:
         """Mean over the pulses; what scatters more than its noise gets the scatter's uncertainty."""
         n = self.time_s.size
+        if n == 1:
+            u = math.hypot(float(self.u_s[0]), float(self.bend_s[0]))
+            return Interval(value_s=float(self.time_s[0]), u_noise_s=u, pull=self.pull[0])
         u = float(np.sqrt(np.sum(self.u_s**2))) / n
         if n >= 3:
             u = max(u, float(np.std(self.time_s, ddof=1)) / np.sqrt(n))
@@ -83,15 +87,13 @@ class Budget:
         self, interval: Interval, *, u_more_s: float = 0.0, more: str = "channel skew", scale: float = 1.0
     ) -> Estimate:
         """Put an interval's uncertainties together; `scale` turns seconds into what is asked for, `more` says what `u_more_s` is."""
-        u_levels = interval.pull * np.asarray(self.u_levels_V)
-        parts = (interval.u_noise_s, self.u_timebase_ratio * abs(interval.value_s), u_more_s, *u_levels)
-        names = ("noise and sampling", "time base", more, *LEVEL_NAMES)
-        kept = {name: abs(float(part) * scale) for name, part in zip(names, parts, strict=True)}
-        return Estimate(
-            value=interval.value_s * scale,
-            u=float(np.sqrt(np.sum(np.square(parts)))) * abs(scale),
-            parts=kept if self.keep_parts else None,
-        )
+        levels = [pull * u for pull, u in zip(interval.pull.tolist(), self.u_levels_V, strict=True)]
+        parts = (interval.u_noise_s, self.u_timebase_ratio * abs(interval.value_s), u_more_s, *levels)
+        kept = None
+        if self.keep_parts:
+            names = ("noise and sampling", "time base", more, *LEVEL_NAMES)
+            kept = {name: abs(part * scale) for name, part in zip(names, parts, strict=True)}
+        return Estimate(value=interval.value_s * scale, u=math.hypot(*parts) * abs(scale), parts=kept)
 
 
 def level_uncertainties(output: StateLevels, drive: StateLevels | None) -> tuple[float, float, float, float]:

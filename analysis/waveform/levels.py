@@ -70,8 +70,9 @@ def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | 
     low_is_state = lower.holds(PLATEAU_SHARE if lower.outer or not upper.outer else INNER_PLATEAU_SHARE)
     high_is_state = upper.holds(PLATEAU_SHARE if upper.outer or not lower.outer else INNER_PLATEAU_SHARE)
     width = (top - bottom) / BINS
-    low = _about(values, bottom + (BINS // 2 - lower.place - 0.5) * width, width) if low_is_state else bottom
-    high = _about(values, bottom + (BINS // 2 + upper.place + 0.5) * width, width) if high_is_state else top
+    sums = np.bincount(place, values - bottom, minlength=BINS + 1)
+    low = bottom + _mean_about(sums, counts, BINS // 2 - 1 - lower.place, width) if low_is_state else bottom
+    high = bottom + _mean_about(sums, counts, BINS // 2 + upper.place, width) if high_is_state else top
     return StateLevels(low_V=low, high_V=high) if high > low else None
 
 
@@ -99,9 +100,11 @@ def _mode(counts: NDArray[np.intp]) -> _Mode:
     return _Mode(place=place, share=near / max(int(np.sum(counts)), 1))
 
 
-def _about(values: FloatArray, centre: float, width: float) -> float:
-    close = values[np.abs(values - centre) <= 2.5 * width]
-    return float(np.mean(close)) if close.size else centre
+def _mean_about(sums: FloatArray, counts: NDArray[np.intp], place: int, width: float) -> float:
+    """Mean above the bottom of the samples in the five bins about a mode."""
+    near = slice(max(place - 2, 0), place + 3)
+    count = int(np.sum(counts[near]))
+    return float(np.sum(sums[near])) / count if count else (place + 0.5) * width
 
 
 def running_mean(signal_V: FloatArray, length: int) -> FloatArray:

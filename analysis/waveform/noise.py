@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -22,7 +22,7 @@ LONGEST_LAG = 256
 ENOUGH_TO_CORRELATE = 4096
 """Samples of one flat part that are enough to tell the correlation."""
 
-MOST_DIFFERENCES = 8192
+MOST_DIFFERENCES = 4096
 """Differences of neighbours that are looked at for hiss and codes: enough for a per cent; of a longer record, stretches."""
 
 STRETCHES = 16
@@ -80,13 +80,17 @@ def difference_sigma(signal_V: FloatArray) -> float:
     ----------
     signal_V : array, shape (n,), n >= 2, volts.
     """
-    steps = steps_between(signal_V)
+    return sigma_of_steps(steps_between(signal_V), lambda: float(np.ptp(signal_V)))
+
+
+def sigma_of_steps(steps: FloatArray, reach_V: Callable[[], float]) -> float:
+    """As `difference_sigma`, from the absolute differences themselves; `reach_V` gives the reach of the record where it is needed."""
     sigma = MAD_TO_SIGMA * float(np.median(steps)) / math.sqrt(2)
     if sigma > 0:
         return sigma
     moving = steps[steps > 0]
     code = float(np.min(moving)) if moving.size else 0.0
-    if code == 0.0 or code > float(np.ptp(signal_V)) / 16:
+    if code == 0.0 or code > reach_V() / 16:
         return 0.0
     small = steps[steps <= 2.5 * code]
     return float(np.sqrt(np.mean(small**2) / 2))
@@ -94,7 +98,7 @@ def difference_sigma(signal_V: FloatArray) -> float:
 
 def steps_between(signal_V: FloatArray) -> FloatArray:
     """Absolute differences of neighbouring samples; of a long record only in stretches spread evenly over it."""
-    if signal_V.size <= 2 * MOST_DIFFERENCES:
+    if signal_V.size <= MOST_DIFFERENCES + STRETCHES:
         return np.abs(np.diff(signal_V))
     each = MOST_DIFFERENCES // STRETCHES
     starts = np.linspace(0, signal_V.size - each - 1, STRETCHES).astype(np.intp)
@@ -108,9 +112,13 @@ def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:
     """
     if stated_V is not None and stated_V > 0:
         return stated_V
-    steps = steps_between(signal_V)
-    largest, reach = float(np.max(steps)), float(np.ptp(signal_V))
-    steps = steps[steps > 1e-9 * max(largest, float(np.max(np.abs(signal_V))))]
+    return code_of_steps(steps_between(signal_V), float(np.min(signal_V)), float(np.max(signal_V)))
+
+
+def code_of_steps(steps: FloatArray, lowest_V: float, highest_V: float) -> float:
+    """As `code_step_V`, from the absolute differences themselves and the ends of the record."""
+    reach = highest_V - lowest_V
+    steps = steps[steps > 1e-9 * max(float(np.max(steps)), abs(lowest_V), abs(highest_V))]
     if steps.size < 2:
         return 0.0
     step = float(np.min(steps))

@@ -48,7 +48,8 @@ def pair_edges(drive: Transitions, output: Transitions, *, end_s: float, skew_s:
         How much later the output channel reads than the drive channel.
     """
     output = replace(output, time_s=output.time_s - skew_s)
-    tries = [_paired(drive, output, inverting=inverting) for inverting in (False, True)]
+    slack = _slack(drive, output)
+    tries = [_paired(drive, output, slack, inverting=inverting) for inverting in (False, True)]
     most = max(pairs.shape[0] for pairs in tries)
     if most == 0:
         return None
@@ -66,8 +67,7 @@ def pair_edges(drive: Transitions, output: Transitions, *, end_s: float, skew_s:
     )  # fmt: skip
 
 
-def _paired(drive: Transitions, output: Transitions, *, inverting: bool) -> IntArray:
-    slack = _slack(drive, output)
+def _paired(drive: Transitions, output: Transitions, slack: float, *, inverting: bool) -> IntArray:
     found = []
     for rising in (True, False):
         mine = np.flatnonzero(drive.rising == rising)
@@ -87,14 +87,21 @@ def _paired(drive: Transitions, output: Transitions, *, inverting: bool) -> IntA
     return np.asarray(pairs[np.argsort(pairs[:, 0], kind="stable")], dtype=np.intp)
 
 
+def middle(values: FloatArray) -> float:
+    """Median of a few values."""
+    ordered = sorted(values.tolist())
+    half = len(ordered) // 2
+    return ordered[half] if len(ordered) % 2 else 0.5 * (ordered[half - 1] + ordered[half])
+
+
 def _slack(drive: Transitions, output: Transitions) -> float:
     """How far an answer may seem to come before its drive edge.
 
     Half the drive edge, a skew that nobody measured, and what the sampling blurs.
     """
-    edge = 0.6 * float(np.median(drive.time_s[:, -1] - drive.time_s[:, 0]))
-    skew = 0.25 * float(np.median(output.time_s[:, -1] - output.time_s[:, 0]))
-    blur = 4 * float(np.median(np.hypot(drive.u_time_s[:, 1].mean(), output.u_time_s[:, 1])))
+    edge = 0.6 * middle(drive.time_s[:, -1] - drive.time_s[:, 0])
+    skew = 0.25 * middle(output.time_s[:, -1] - output.time_s[:, 0])
+    blur = 4 * middle(np.hypot(drive.u_time_s[:, 1].mean(), output.u_time_s[:, 1]))
     gaps = np.diff(drive.time_s[:, 1])
     longest = 0.4 * float(np.min(gaps)) if gaps.size else np.inf
     return min(edge + skew + blur, longest)
@@ -103,7 +110,7 @@ def _slack(drive: Transitions, output: Transitions) -> float:
 def _slower_delay(drive: Transitions, output: Transitions, pairs: IntArray) -> float:
     lags = output.time_s[pairs[:, 1], 1] - drive.time_s[pairs[:, 0], 1]
     rising = drive.rising[pairs[:, 0]]
-    return max(float(np.median(lags[rising == way])) for way in (True, False) if bool(np.any(rising == way)))
+    return max(middle(lags[rising == way]) for way in (True, False) if bool(np.any(rising == way)))
 
 
 def time_edges(transitions: Transitions, which: IntArray, *, budget: Budget) -> dict[str, Estimate]:

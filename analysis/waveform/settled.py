@@ -11,6 +11,7 @@ References: IEEE Std 181-2011 for levels and instants; Aitken (1935) for least s
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
@@ -59,6 +60,9 @@ LEAST_INDEPENDENT = 20.0
 
 MISFIT = 3.5
 """Standard deviations of chi-squared beyond which edges are not of the family, or their plateaus not level."""
+
+NOISE_KNOWN_TO = 1.05
+"""Chi-squared is taken for this much smaller: the variance of the noise is itself known to a few per cent only."""
 
 FINEST_RATIO = 1e-4
 """Share of the amplitude below which no misfit is looked for: what the bins may blunt."""
@@ -280,12 +284,27 @@ def _put(fits: WhiteFits, new: WhiteFits, rows: IntArray) -> WhiteFits:
 
 def _dies_down(rest_V: Sequence[FloatArray], noise: Noise) -> bool:
     """Whether what is called noise is larger in the first halves of the stretches at rest than in the second: then it is ringing or a tail."""
-    halves = [(part[: part.size // 2], part[part.size // 2 :]) for part in rest_V if part.size >= 16]
-    if not halves or noise.sigma_V <= 0:
+    if noise.sigma_V <= 0:
         return False
-    early, late = (sum(float(np.var(half[k])) * half[k].size for half in halves) for k in (0, 1))
+    early = late = 0.0
+    for part in rest_V:
+        half = part.size // 2
+        if half < 8:
+            continue
+        first, second = part[:half], part[half:]
+        early += float(first @ first) - half * float(first.mean()) ** 2
+        late += float(second @ second) - second.size * float(second.mean()) ** 2
     dof = max(noise.independent / 2, 1.0)
-    return early > 0 and float(np.log(early / max(late, 1e-300))) > DYING * float(np.sqrt(4 / dof))
+    return early > 0 and math.log(early / max(late, 1e-300)) > DYING * math.sqrt(4 / dof)
+
+
+def _deviations(chi2: FloatArray, freedom: FloatArray) -> FloatArray:
+    """By how many standard deviations of a normal distribution chi-squared is too large.
+
+    E. B. Wilson and M. M. Hilferty, Proc. Natl. Acad. Sci. 17, 684 (1931).
+    """
+    spread = 2.0 / (9.0 * freedom)
+    return np.asarray((np.cbrt(chi2 / freedom) - (1.0 - spread)) / np.sqrt(spread))
 
 
 class _Job:
@@ -420,34 +439,39 @@ class _Job:
 
     def _noise(self, channel: int, parameters: FloatArray) -> Noise:
         """Noise of one channel from its plateaus, with the tails of the edges taken off."""
-        look, (first, last) = self.looks[channel], self.bounds[channel : channel + 2]
+        look, (first, last) = self.looks[channel], self.bounds[channel : channel + 2].tolist()
         signal, cut = look.record.signal_V, self.cut
         rest: list[FloatArray] = []
         left = MOST_REST
-        unit = cut.unit
-        for row in range(int(first), int(last)):
-            place, tau, s, _, swing = parameters[row]
-            tau, s = float(np.exp(tau)) * unit[row], float(np.exp(s)) * unit[row]
-            origin = cut.quarter[row, 1] + float(place) * unit[row] - tau
+        for row in range(first, last):
+            origin, tau, s, swing = self._course(row, parameters)
             if row == first:
                 end = int(max(origin - 4 * s, 0.0))
-                rest.append(signal[max(end - left, 0) : end])
-            begin = int(np.ceil(origin + 4 * s + 3 * tau)) + 1
-            end = int(cut.window[row, 1]) if row + 1 < last else signal.size
-            end = min(end, begin + left)
+                rest.append(signal[max(end - left, 0) : end] - look.levels.low_V)
+            begin = int(origin + 4 * s + 3 * tau) + 2
+            end = min(int(cut.window[row, 1]) if row + 1 < last else signal.size, begin + left)
             if end - begin >= 4:
-                tail = (
-                    np.exp(np.minimum(origin - np.arange(begin, end), 0.0) / tau + 0.5 * (s / tau) ** 2)
-                    if tau > max(0.2, s / 3)
-                    else 0.0
-                )
-                rest.append(signal[begin:end] + (1 if cut.rising[row] else -1) * swing * cut.amplitude_V[row] * tail)
-            left -= sum(part.size for part in rest[-1:])
+                part = signal[begin:end] - look.levels.low_V
+                if tau > max(0.2, s / 3):
+                    part += swing * np.exp((origin - np.arange(begin, end)) / tau + 0.5 * (s / tau) ** 2)
+                rest.append(part)
+            left -= rest[-1].size
             if left < 64:
                 break
         noise = rest_noise(rest, fallback_V=look.hiss_V)
         self.dying[channel] = _dies_down(rest, noise)
         return noise
+
+    def _course(self, row: int, parameters: FloatArray) -> tuple[float, float, float, float]:
+        """Begin, time constant and front end of one edge in samples of its record, and its signed swing in volts."""
+        place, ln_tau, ln_s, _, swing = parameters[row].tolist()
+        unit = float(self.cut.unit[row])
+        tau = math.exp(ln_tau) * unit
+        sign = 1.0 if self.cut.rising[row] else -1.0
+        return (
+            float(self.cut.quarter[row, 1]) + place * unit - tau, tau, math.exp(ln_s) * unit,
+            sign * swing * float(self.cut.amplitude_V[row]),
+        )  # fmt: skip
 
     def _joined(
         self, rivals: Sequence[tuple[WhiteFits, FloatArray]], noises: Sequence[Noise], fractions: tuple[float, ...]
@@ -468,7 +492,7 @@ class _Job:
         away = joint[cut.channel] - low_high
         disagree = np.bincount(cut.channel, np.einsum("ei,eij,ej->e", away, information, away), n)
         freedom = 2.0 * np.diff(self.bounds) - 2
-        agrees = disagree - freedom <= MISFIT * np.sqrt(2 * np.maximum(freedom, 1)) + 4
+        agrees = (freedom < 1) | (_deviations(disagree / NOISE_KNOWN_TO, np.maximum(freedom, 1.0)) <= MISFIT)
         residual = np.stack([fit.residual for fit, _ in rivals])[best, row]
         good = np.ones(n, dtype=np.bool_)
         np.logical_and.at(good, cut.channel, np.stack([fit.good for fit, _ in rivals])[best, row])
@@ -536,8 +560,7 @@ class _Job:
         chi2 = np.bincount(group, np.sum(residual**2, axis=1) / sigma**2, 2 * n)
         freedom = np.maximum(np.bincount(group, self.entries - 5, 2 * n), 1.0)
         coloured = self.place >= 0
-        allowed = 1.25 * MISFIT  # the noise itself is known to a few per cent only
-        fine = (chi2 - freedom) / np.sqrt(2 * freedom + (0.06 * freedom) ** 2) <= allowed
+        fine = _deviations(chi2 / NOISE_KNOWN_TO, freedom) <= MISFIT
         lump = np.searchsorted(LUMPS, bins.x)
         place = group[:, None] * (LUMPS.size + 1) + lump
         raw = residual * self.root
@@ -550,7 +573,7 @@ class _Job:
         lumps = np.where(filled, (sums / np.maximum(counts, 1)) ** 2 / np.maximum(variance, 1e-300), 0.0)
         lumped = lumps.reshape(2 * n, -1).sum(axis=1)
         dof = np.maximum(filled.reshape(2 * n, -1).sum(axis=1) - 4.0, 1.0)
-        coarse = (lumped - dof) / np.sqrt(2 * dof) <= MISFIT
+        coarse = _deviations(lumped / NOISE_KNOWN_TO, dof) <= MISFIT
         both = fine & coarse
         return np.asarray(both[0::2] & both[1::2])
 
