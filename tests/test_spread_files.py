@@ -315,6 +315,15 @@ class TestByItself:
         assert_joined(capture)
         assert capture.read_as[-1] == "left aside: a_4.csv"
 
+    def test_the_lower_channel_is_the_drive_in_whatever_order_the_files_are_given(self, tmp_path: Path) -> None:
+        plant(tmp_path, pair("a"))
+        intake = take_in([tmp_path / "a_2.csv", tmp_path / "a_1.csv"], today=TODAY)
+        assert_joined(captured(intake, "a"))
+
+    def test_a_trace_that_its_heading_calls_otherwise_is_not_left_aside(self, tmp_path: Path) -> None:
+        plant(tmp_path, pair("a") | {"a_F1.csv": two_rows("4", OUTPUT_V)})
+        assert names_in(take(tmp_path, channels=PATTERNS)) == ["a", "a_F1.csv"]
+
     def test_three_channels_without_roles_stay_apart_and_are_told_of(self, tmp_path: Path) -> None:
         """As in one file with three channels, nothing says which is the drive."""
         plant(tmp_path, pair("a") | {"a_3.csv": two_rows("3", OUTPUT_V)})

@@ -13,7 +13,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 from darkedge.analysis.errors import CaptureError, InputError
-from darkedge.analysis.files.gather import Part, Source
+from darkedge.analysis.files.gather import Part, Source, natural_key
 from darkedge.analysis.files.layout import find_layout
 from darkedge.analysis.files.names import file_stem
 from darkedge.analysis.files.own_capture import is_own
@@ -91,24 +91,22 @@ def judged(group: Group, roles: ChannelRoles | None) -> Verdict:
     files = [file for file in _alike(group) if file.is_sure or not is_computed(file.name)]
     if len(files) < 2 or _contradict(files):
         return Verdict()
-    assignment = _assignment([file.name for file in files], roles)
+    ordered = sorted(files, key=lambda file: natural_key(file.path.name))
+    assignment = _assignment([file.name for file in ordered], roles)
     if assignment is None or not all(file.is_sure for file in files):
-        return Verdict(remarked=tuple(_remarked(file, files, group.stem) for file in files))
-    by_place = {place: "output" if k == 1 else f"output{k}" for k, place in assignment.outputs.items()}
+        return Verdict(remarked=tuple(_remarked(file, ordered, group.stem) for file in ordered))
+    by_path = {ordered[place].path: "output" if k == 1 else f"output{k}" for k, place in assignment.outputs.items()}
     if assignment.drive is not None:
-        by_place[assignment.drive] = "drive"
-    return Verdict(
-        parts=tuple(
-            Part(path=file.member.source.path, role=by_place.get(place, "aside")) for place, file in enumerate(files)
-        )
-    )
+        by_path[ordered[assignment.drive].path] = "drive"
+    return Verdict(parts=tuple(Part(path=file.path, role=by_path.get(file.path, "aside")) for file in files))
 
 
 def computed_beside(group: Group) -> list[Path]:
     """The files of a group that are certainly traces computed from the others: `F1` by name and heading, alike in all else."""
     if not any(is_computed(member.tag) for member in group.members):
         return []
-    return [file.member.source.path for file in _alike(group) if file.is_sure and is_computed(file.member.tag)]
+    computed = [file for file in _alike(group) if is_computed(file.member.tag)]
+    return [file.path for file in computed if _number(file.heading) == _number(file.member.tag)]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -118,6 +116,11 @@ class _File:
     member: Member
     heading: str
     likeness: tuple[object, ...]
+
+    @property
+    def path(self) -> Path:
+        """Where it is."""
+        return self.member.source.path
 
     @property
     def name(self) -> str:
@@ -206,8 +209,8 @@ def _assignment(names: Sequence[str], roles: ChannelRoles | None) -> Assignment 
 
 def _remarked(file: _File, files: Sequence[_File], stem: str) -> Source:
     source = file.member.source
-    others = [other.member.source.path.name for other in files if other is not file]
-    patterns = [f"*{other.member.source.path.name[len(stem) :]}" for other in files]
+    others = [other.path.name for other in files if other is not file]
+    patterns = [f"*{other.path.name[len(stem) :]}" for other in files]
     said = (
         f"read by itself; it may be one channel of an acquisition with {' and '.join(others)} (same form, same times), "
         f"but that or the roles are not certain: if so, say which is which, such as --channels "
