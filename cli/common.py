@@ -61,7 +61,7 @@ Channels = Annotated[
     typer.Option(
         "--channels",
         metavar="ROLES",
-        help="Which channel is which in other programs' files, such as 'drive=1,output=3'; 'time=us' where no unit is stated.",
+        help="Which channel is which in other programs' files, such as 'drive=1,output=3'; of a file per channel 'drive=*_1.csv,output=*_3.csv'; 'time=us' where no unit is stated.",
         show_default=False,
     ),
 ]

@@ -43,12 +43,18 @@ class ConditionsTable:
     name: str
     rows: Mapping[str, StatedConditions]
 
-    def for_capture(self, name: str) -> list[StatedConditions]:
-        """Every row that speaks of the capture of this name; usually one or none."""
-        return [self.rows[key] for key in _keys_of(name) if key in self.rows]
+    def for_capture(self, name: str, parts: Sequence[str] = ()) -> list[StatedConditions]:
+        """Every row that speaks of the capture of this name, or of one of the files it is spread over; usually one or none."""
+        return [self.rows[key] for key in _keys_of(name, *parts) if key in self.rows]
 
-    def check_against(self, names: Sequence[str]) -> None:
+    def check_against(self, names: Sequence[str], parts: Mapping[str, Sequence[str]] | None = None) -> None:
         """Hold the table against the captures that were found.
+
+        Parameters
+        ----------
+        names : sequence of str
+        parts : mapping, optional
+            Names of the files of each capture that is spread over several.
 
         Raises
         ------
@@ -57,7 +63,7 @@ class ConditionsTable:
         """
         meant: dict[str, str] = {}
         for name in names:
-            for key in _keys_of(name):
+            for key in _keys_of(name, *(parts or {}).get(name, ())):
                 if key not in self.rows:
                     continue
                 if meant.setdefault(key, name) != name:
@@ -108,11 +114,14 @@ def read_conditions(path: Path) -> ConditionsTable:
     return ConditionsTable(name=where, rows=rows)
 
 
-def _keys_of(name: str) -> list[str]:
+def _keys_of(*names: str) -> list[str]:
     """Path, path without extension, file name, file name without extension: most particular first, each once."""
-    folder, _, file_name = name.rpartition("/")
-    stem = file_stem(file_name)
-    return list(dict.fromkeys([name, f"{folder}/{stem}" if folder else stem, file_name, stem]))
+    keys: list[str] = []
+    for name in names:
+        folder, _, file_name = name.rpartition("/")
+        stem = file_stem(file_name)
+        keys += [name, f"{folder}/{stem}" if folder else stem, file_name, stem]
+    return list(dict.fromkeys(keys))
 
 
 def _row_conditions(record: Mapping[str, object], here: str) -> Conditions:

@@ -8,12 +8,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from darkedge.analysis.captures import Capture, Record, TimedRecord
+from darkedge.analysis.captures import Capture, Conditions, FloatArray, Record, TimedRecord
 from darkedge.analysis.errors import CaptureError
 from darkedge.analysis.files.layout import Layout, find_layout
 from darkedge.analysis.files.number_table import A_WAVEFORM, NumberTable, digits_behind, finite_part
 from darkedge.analysis.files.numbers import BLANKS, read_numbers
-from darkedge.analysis.files.roles import ChannelRoles, assign_roles
+from darkedge.analysis.files.roles import ChannelRoles, assign_roles, listed_channels, plain_channels
 from darkedge.analysis.files.stated import axis_units, stated_conditions
 from darkedge.analysis.files.time_columns import Times, time_places, times_of
 from darkedge.analysis.files.units_written import Dimension
@@ -52,6 +52,97 @@ def parse_foreign(text: bytes, *, name: str, channels: ChannelRoles | None = Non
     CaptureError
         The text is no time-domain waveform, or something in it cannot be decided. The message says line and reason.
     """
+    opened = _open(text)
+    table, found = opened.table, opened.channels
+    roles = assign_roles([channel.name for channel in found], channels)
+    outputs = {element: found[index] for element, index in sorted(roles.outputs.items())}
+    drive = None if roles.drive is None else found[roles.drive]
+    used = [*outputs.values(), *([] if drive is None else [drive])]
+    _refuse_counts(table, used)
+    told = None if channels is None else channels.time_scale
+    places = {channel.time_place for channel in used}
+    times = {place: times_of(table, place, opened.counting, told) for place in places}
+    _refuse_unlike_times(table, list(times.values()), stated=channels is not None and bool(channels.outputs))
+    drive_record = None if drive is None else _record(table, drive, times[drive.time_place], drive=True)
+    records = {element: _record(table, c, times[c.time_place]) for element, c in outputs.items()}
+    uneven = any(isinstance(record, TimedRecord) for record in (drive_record, *records.values()))
+    assumed = any(axis.unit_assumed for axis in times.values())
+    return Capture(
+        name=name,
+        drive=drive_record,
+        outputs=records,
+        conditions=stated_conditions(table.layout.settings),
+        remarks=_remarks(uneven=uneven, min_max=opened.has_companions, assumed=assumed),
+        read_as=_understood(table, drive, outputs, times),
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Signal:
+    """The one signal of a file: volts (amperes of a drive) from row `first_row` of the times on, and what is known beside."""
+
+    signal_V: FloatArray
+    first_row: int
+    times: Times
+    conditions: Conditions
+    remarks: tuple[str, ...]
+    read_as: str
+
+
+def parse_signal(text: bytes, *, is_drive: bool = False, time_scale: float | None = None) -> Signal:
+    """Read a file of another program that holds one channel of an acquisition; computed traces beside it do not count.
+
+    Parameters
+    ----------
+    text : bytes
+        UTF-8, lines ending in LF.
+    is_drive : bool
+        The drive may be in amperes, and in whole numbers.
+    time_scale : float, optional
+        Seconds in one unit of the times, where the user says so.
+
+    Raises
+    ------
+    CaptureError
+        As `parse_foreign`, or there is more than one signal.
+    """
+    opened = _open(text)
+    table = opened.table
+    names = [channel.name for channel in opened.channels]
+    places = plain_channels(names)
+    if len(places) != 1:
+        raise CaptureError(
+            "the file holds more than one signal", where=table.heading, found=listed_channels(names),
+            wanted="one channel a file",
+            mend="measure it by itself, and say which is which by channel, such as --channels drive=1,output=2",
+        )  # fmt: skip
+    channel = opened.channels[places[0]]
+    if not is_drive:
+        _refuse_counts(table, [channel])
+    times = times_of(table, channel.time_place, opened.counting, time_scale)
+    signal_V, first_row = _samples(table, channel, times, drive=is_drive)
+    uneven = times.axis.stamps_s is not None
+    return Signal(
+        signal_V=signal_V,
+        first_row=first_row,
+        times=times,
+        conditions=stated_conditions(table.layout.settings),
+        remarks=_remarks(uneven=uneven, min_max=opened.has_companions, assumed=times.unit_assumed),
+        read_as="; ".join((_channel_words(table, channel), _written_words(table), _time_words(table, times))),
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Opened:
+    """The numbers of a file, its channels without the second ends of minimum-maximum records, and the columns that count."""
+
+    table: NumberTable
+    channels: Sequence[_Channel]
+    counting: Sequence[int]
+    has_companions: bool
+
+
+def _open(text: bytes) -> _Opened:
     layout = find_layout(text)
     _refuse_spectra(layout)
     table = NumberTable(layout=layout, values=read_numbers(layout.body))
@@ -60,55 +151,45 @@ def parse_foreign(text: bytes, *, name: str, channels: ChannelRoles | None = Non
     found = _channels(table, stamped, counting)
     companions = _companions(table, found)
     found = [channel for place, channel in enumerate(found) if place not in companions]
-    roles = assign_roles([channel.name for channel in found], channels)
-    outputs = {element: found[index] for element, index in sorted(roles.outputs.items())}
-    drive = None if roles.drive is None else found[roles.drive]
-    used = [*outputs.values(), *([] if drive is None else [drive])]
-    _refuse_counts(table, used)
-    told = None if channels is None else channels.time_scale
-    times = {place: times_of(table, place, counting, told) for place in {channel.time_place for channel in used}}
-    _refuse_unlike_times(table, list(times.values()), stated=channels is not None and bool(channels.outputs))
-    drive_record = None if drive is None else _record(table, drive, times[drive.time_place], drive=True)
-    records = {element: _record(table, c, times[c.time_place]) for element, c in outputs.items()}
-    uneven = any(isinstance(record, TimedRecord) for record in (drive_record, *records.values()))
-    assumed = any(axis.unit_assumed for axis in times.values())
-    remarks = {"uneven_time": uneven, "min_max_record": bool(companions), "time_unit_assumed": assumed}
-    return Capture(
-        name=name,
-        drive=drive_record,
-        outputs=records,
-        conditions=stated_conditions(layout.settings),
-        remarks=tuple(code for code, true in remarks.items() if true),
-        read_as=_understood(table, drive, outputs, times),
-    )
+    return _Opened(table=table, channels=found, counting=counting, has_companions=bool(companions))
+
+
+def _remarks(*, uneven: bool, min_max: bool, assumed: bool) -> tuple[str, ...]:
+    remarks = {"uneven_time": uneven, "min_max_record": min_max, "time_unit_assumed": assumed}
+    return tuple(code for code, true in remarks.items() if true)
 
 
 def _understood(
     table: NumberTable, drive: _Channel | None, outputs: Mapping[int, _Channel], times: Mapping[int | None, Times]
 ) -> tuple[str, ...]:
     """In words: how the numbers are written, which column is what, in which unit, and what was left aside."""
-    body = table.layout.body
-    separator = {"\t": "tabulators", BLANKS: "blanks"}.get(body.writing.separator, f"{body.writing.separator!r}")
-    mark = "comma" if body.writing.decimal == "," else "point"
-    words = [
-        f"numbers from line {body.first_line} on, {len(table.values)} rows, separated by {separator}, decimal {mark}"
-    ]
-    for time in times.values():
-        where = "counted rows" if time.place is None else table.called(time.place)
-        assumed = ", no unit stated, taken as seconds" if time.unit_assumed else ""
-        words.append(f"time: {where}{assumed}, from {time.axis.t0_s:.6g} s in steps of {time.axis.dt_s:.6g} s")
+    words = [_written_words(table), *(_time_words(table, time) for time in times.values())]
     for role, channel in (("drive", drive), *((f"output of element {k}", c) for k, c in outputs.items())):
-        if channel is None:
-            words.append("drive: none")
-            continue
-        unit = table.layout.columns[channel.place].unit or table.axis_unit(Dimension.VOLTAGE)
-        stated = "no unit stated, taken as V" if unit is None else f"in {unit.text}"
-        words.append(f"{role}: {table.called(channel.place)}, {stated}")
+        words.append(f"{role}: {'none' if channel is None else _channel_words(table, channel)}")
     used = {c.place for c in outputs.values()} | {t.place for t in times.values()} | ({drive.place} if drive else set())
     aside = [table.called(place) for place in range(len(table.layout.columns)) if place not in used]
     if aside:
         words.append(f"left aside: {', '.join(aside)}")
     return tuple(words)
+
+
+def _written_words(table: NumberTable) -> str:
+    body = table.layout.body
+    separator = {"\t": "tabulators", BLANKS: "blanks"}.get(body.writing.separator, f"{body.writing.separator!r}")
+    mark = "comma" if body.writing.decimal == "," else "point"
+    rows = len(table.values)
+    return f"numbers from line {body.first_line} on, {rows} rows, separated by {separator}, decimal {mark}"
+
+
+def _time_words(table: NumberTable, time: Times) -> str:
+    where = "counted rows" if time.place is None else table.called(time.place)
+    assumed = ", no unit stated, taken as seconds" if time.unit_assumed else ""
+    return f"time: {where}{assumed}, from {time.axis.t0_s:.6g} s in steps of {time.axis.dt_s:.6g} s"
+
+
+def _channel_words(table: NumberTable, channel: _Channel) -> str:
+    unit = table.layout.columns[channel.place].unit or table.axis_unit(Dimension.VOLTAGE)
+    return f"{table.called(channel.place)}, {'no unit stated, taken as V' if unit is None else f'in {unit.text}'}"
 
 
 def _refuse_spectra(layout: Layout) -> None:
@@ -200,6 +281,12 @@ def _refuse_unlike_times(table: NumberTable, times: Sequence[Times], *, stated: 
 
 
 def _record(table: NumberTable, channel: _Channel, times: Times, *, drive: bool = False) -> Record:
+    signal_V, first_row = _samples(table, channel, times, drive=drive)
+    return times.axis.record(signal_V, first_row=first_row)
+
+
+def _samples(table: NumberTable, channel: _Channel, times: Times, *, drive: bool) -> tuple[FloatArray, int]:
+    """A channel without the blanks at its ends, and the row of the times in which it begins."""
     unit = table.layout.columns[channel.place].unit or table.axis_unit(Dimension.VOLTAGE)
     if unit is not None and unit.dimension is Dimension.CURRENT and not drive:
         raise CaptureError(
@@ -216,7 +303,7 @@ def _record(table: NumberTable, channel: _Channel, times: Times, *, drive: bool 
         raise CaptureError(
             "a sample without its time", where=f"{table.line(row)}, {table.called(channel.place)}", wanted=A_WAVEFORM
         )
-    return times.axis.record(column[first : first + count], first_row=first - times.first)
+    return column[first : first + count], first - times.first
 
 
 def _refuse_counts(table: NumberTable, channels: Sequence[_Channel]) -> None:

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import os
 import re
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
-from pathlib import Path
+from pathlib import Path, PurePosixPath
 
 from darkedge.analysis.errors import InputError
 from darkedge.analysis.files.archive import archive_names, is_archive
@@ -20,31 +20,53 @@ _SNIFF_BYTES = 4096
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class Part:
+    """One file of an acquisition that is spread over several: `drive`, `output`, `output2` ..., or `aside` where it is not used."""
+
+    path: Path
+    role: str
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Source:
     """One capture that was found: its file, and its name relative to the argument, with `/`.
 
     `run_folder` is the run it belongs to, `None` for a capture outside a run. `place` is its row in an archive, `None` for a file.
+    `parts` are the files of an acquisition that is spread over a file per channel; `path` is then the first of them, and the name
+    is folder and stem, without the ending. `remark` is what there is to say of a file that may be one of such files.
     """
 
     path: Path
     name: str
     run_folder: Path | None = None
     place: int | None = None
+    parts: tuple[Part, ...] = ()
+    remark: str = ""
+
+    @property
+    def part_names(self) -> tuple[str, ...]:
+        """What the files of a spread acquisition would be called by themselves."""
+        return tuple((PurePosixPath(self.name).parent / part.path.name).as_posix() for part in self.parts)
 
 
-def find_captures(paths: Sequence[Path]) -> list[Source]:
+Joining = Callable[[Sequence[Source]], Sequence[Source]]
+"""Puts files that are channels of one acquisition together; the joined source has the path of one of them."""
+
+
+def find_captures(paths: Sequence[Path], joining: Joining | None = None) -> list[Source]:
     """Find the captures under the paths of a command.
 
     A file stands for itself, an archive for the captures in it. A run (a folder with `captures/`) gives the files in there and nothing else; any other
     folder, a lot among them, is searched through all its folders for capture files (`.csv`, `.txt`, `.dat`, `.tsv`,
     `.asc`, no extension, each also with `.gz`), where journals, tables with a column `capture` and hidden files are
     left out. The order is that of the arguments, then the natural one of names (2 before 10). A file is listed once.
-    Names that would be the same under two arguments carry the folder of their argument in front.
+    Names that would be the same under two arguments carry the folder of their argument in front. With `joining`, files of
+    one acquisition are one source, at the place of the first of them.
 
     Raises
     ------
     InputError
-        A path that is not there, a folder that cannot be searched, a folder without captures.
+        A path that is not there, a folder that cannot be searched, a folder without captures; what `joining` raises.
     """
     found: dict[tuple[Path, int | None], tuple[Source, Path]] = {}
     for path in paths:
@@ -57,7 +79,11 @@ def find_captures(paths: Sequence[Path]) -> list[Source]:
             )
         for source in sources:
             found.setdefault((source.path.resolve(), source.place), (source, path))
-    return _with_unlike_names(list(found.values()))
+    if joining is None:
+        return _with_unlike_names(list(found.values()))
+    arguments = {(source.path, source.place): argument for source, argument in found.values()}
+    joined = joining([source for source, _ in found.values()])
+    return _with_unlike_names([(source, arguments[source.path, source.place]) for source in joined])
 
 
 def _under(path: Path) -> Iterator[Source]:

@@ -18,6 +18,7 @@ from darkedge.analysis.files.captures import read_capture
 from darkedge.analysis.files.conditions import ConditionsTable, read_conditions
 from darkedge.analysis.files.fixture_file import read_fixture
 from darkedge.analysis.files.gather import Source, find_captures
+from darkedge.analysis.files.joining import SpreadFiles
 from darkedge.analysis.files.load import Refusal, load_capture
 from darkedge.analysis.files.names import NamePattern
 from darkedge.analysis.files.roles import ChannelRoles
@@ -116,9 +117,9 @@ def take_in(
             mend="give --names and --conditions with captures, or correct the table",
         )
     rows = [row for table in tables for row in read_table(table)]
-    reading = _Reading(find_captures(rest) if rest else [], pattern, stated, roles, given, reference)
-    if stated is not None:
-        stated.check_against(list(reading.sources))
+    joining = SpreadFiles(roles=roles, names=pattern, conditions=stated)
+    reading = _Reading(find_captures(rest, joining) if rest else [], pattern, stated, roles, given, reference)
+    reading.check_stated()
     found: list[Measurement | StillTrace] = []
     refused: list[Refused] = []
     for done, taken in enumerate(take_each(reading, jobs=jobs), start=1):
@@ -169,16 +170,13 @@ def pack(
     InputError
         As `take_in`, or the archive cannot be written.
     """
+    pattern = None if names is None else NamePattern(names)
+    roles = None if channels is None else ChannelRoles.parse(channels)
     stated = None if conditions is None else read_conditions(conditions)
-    reading = _Reading(
-        find_captures(paths),
-        None if names is None else NamePattern(names),
-        stated,
-        None if channels is None else ChannelRoles.parse(channels),
-        None if fixture is None else read_fixture(fixture, edge_time=_edge_time),
-    )
-    if stated is not None:
-        stated.check_against(list(reading.sources))
+    given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time)
+    joining = SpreadFiles(roles=roles, names=pattern, conditions=stated)
+    reading = _Reading(find_captures(paths, joining), pattern, stated, roles, given)
+    reading.check_stated()
     refusals: list[Refused] = []
 
     def captures() -> Iterator[tuple[Capture, Fixture | None]]:
@@ -262,6 +260,12 @@ class _Reading:
             fixture = given or self._kept(source) or (None if folder is None else self.contexts[folder].fixture)
             if fixture is not None:
                 self.fixtures[source.name] = fixture
+
+    def check_stated(self) -> None:
+        """Hold the table of conditions against the sources."""
+        if self.stated is not None:
+            parts = {name: source.part_names for name, source in self.sources.items()}
+            self.stated.check_against(list(self.sources), parts)
 
     def _kept(self, source: Source) -> Fixture | None:
         """The fixture that an archive keeps with a capture."""

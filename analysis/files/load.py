@@ -13,6 +13,7 @@ from darkedge.analysis.files.conditions import ConditionsTable
 from darkedge.analysis.files.gather import Source
 from darkedge.analysis.files.names import NamePattern
 from darkedge.analysis.files.roles import ChannelRoles
+from darkedge.analysis.files.spread import read_spread
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -35,6 +36,8 @@ def load_captures(
     The conditions of a capture are those of its header, joined with those of its file name and those of the table. A
     file that the pattern or the table does not speak of has the others only. Where nothing at all is stated, or the
     pattern was given, does not match and the file itself states nothing, the capture is remarked `conditions_missing`.
+    An acquisition that is spread over several files has the conditions of all their headers, and, where the pattern
+    does not match its own name, those of their names.
 
     Parameters
     ----------
@@ -55,7 +58,7 @@ def load_captures(
         The table of conditions as a whole does not fit the captures; raised before the first is read.
     """
     if conditions is not None:
-        conditions.check_against([source.name for source in sources])
+        conditions.check_against([s.name for s in sources], {s.name: s.part_names for s in sources})
     return (load_capture(source, names, conditions, channels) for source in sources)
 
 
@@ -66,24 +69,30 @@ def load_capture(
     try:
         if source.place is not None:
             capture = replace(read_archived(source.path, source.place), name=source.name)
+        elif source.parts:
+            capture = read_spread(source, channels)
         else:
             capture = read_capture(source.path, name=source.name, channels=channels)
-        return _with_conditions(capture, source.name, names, conditions)
+            capture = replace(capture, read_as=(*capture.read_as, *([source.remark] if source.remark else [])))
+        return _with_conditions(capture, source, names, conditions)
     except InputError as error:
-        if isinstance(error, CaptureError):
-            return Refusal(name=source.name, error=error)
-        return Refusal(name=source.name, error=_as_capture_error(error))
+        if source.remark and channels is not None and channels.outputs:
+            return Refusal(name=source.name, error=_as_capture_error(error, also=source.remark))
+        return Refusal(name=source.name, error=error if isinstance(error, CaptureError) else _as_capture_error(error))
 
 
-def _with_conditions(capture: Capture, name: str, names: NamePattern | None, table: ConditionsTable | None) -> Capture:
+def _with_conditions(
+    capture: Capture, source: Source, names: NamePattern | None, table: ConditionsTable | None
+) -> Capture:
+    name = source.name
     try:
         joined = capture.conditions
         here = "the file"
-        from_name = names.conditions(name) if names is not None else None
+        from_name = None if names is None else _from_names(names, name, source.part_names)
         if from_name is not None:
             joined = joined.merged(from_name, here=here, there="the file name")
             here = "the file or its name"
-        for row in table.for_capture(name) if table is not None else ():
+        for row in table.for_capture(name, source.part_names) if table is not None else ():
             joined = joined.merged(row.conditions, here=here, there=row.row)
             here = "another row, the file or its name"
     except InputError as error:
@@ -100,6 +109,17 @@ def _with_conditions(capture: Capture, name: str, names: NamePattern | None, tab
     return _for_element(replace(capture, conditions=joined, remarks=tuple(dict.fromkeys(remarks))))
 
 
+def _from_names(pattern: NamePattern, name: str, parts: Sequence[str]) -> Conditions | None:
+    """What the name of a capture says; where it says nothing, what the names of its files say."""
+    found = [said for said in (pattern.conditions(name), *map(pattern.conditions, parts)) if said is not None]
+    if pattern.conditions(name) is not None or not found:
+        return found[0] if found else None
+    joined = found[0]
+    for said in found[1:]:
+        joined = joined.merged(said, here="the name of one of its files", there="that of another")
+    return joined
+
+
 def _for_element(capture: Capture) -> Capture:
     """A lone output belongs to the element that the conditions name."""
     element = capture.conditions.element
@@ -109,5 +129,6 @@ def _for_element(capture: Capture) -> Capture:
     return replace(capture, outputs={element: record})
 
 
-def _as_capture_error(error: InputError) -> CaptureError:
-    return CaptureError(error.what, where=error.where, found=error.found, wanted=error.wanted, mend=error.mend)
+def _as_capture_error(error: InputError, *, also: str = "") -> CaptureError:
+    mend = "; ".join(words for words in (error.mend, also) if words)
+    return CaptureError(error.what, where=error.where, found=error.found, wanted=error.wanted, mend=mend)

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 from darkedge.analysis.errors import CaptureError, InputError
+from darkedge.analysis.files.channel_files import FilePattern, file_patterns
 from darkedge.analysis.files.units_written import Dimension, read_unit
 
 _DRIVE_WORDS = {"drive", "input", "generator", "gen", "led", "emitter", "laser", "stimulus", "excitation", "vin"}
@@ -22,20 +23,26 @@ class ChannelRoles:
 
     A number means the channel whose name ends in it (`2` is `CH2`, `C2`, `Channel 2`); where no channel is numbered,
     it counts the channels from 1. `time_scale` is seconds in one unit of the times, `None` where the user does not say.
+    Where an acquisition is spread over a file per channel, `files` has the pattern of each role's files, and the other
+    two name nothing.
     """
 
     drive: str | None = None
     outputs: Mapping[int, str]
     time_scale: float | None = None
+    files: Mapping[str, FilePattern] = field(default_factory=dict)
 
     @classmethod
     def parse(cls, text: str) -> ChannelRoles:
         """Read `drive=1,output=3` or, with several elements, `drive=1,output=2,output2=3`; `time=us` beside it or alone.
 
+        With `*` in them, as in `drive=*_1.csv,output=*_2.csv`, they are patterns of files of one channel each.
+
         Raises
         ------
         InputError
-            No role or a role twice, an unknown role, one channel in two roles, no output, a unit that is none of time.
+            No role or a role twice, an unknown role, one channel in two roles, no output, a unit that is none of time,
+            a pattern that is none, patterns beside channels.
         """
         where = f"--channels {text}"
         found: dict[str, str] = {}
@@ -55,11 +62,22 @@ class ChannelRoles:
             if role in found or channel in found.values():
                 raise InputError("a role or channel is given twice", where=where, found=repr(part.strip()))
             found[role] = channel
+        try:
+            files = file_patterns(found)
+        except InputError as error:
+            raise error.at(where) from error
         drive = found.pop("drive", None)
         if not found and (drive is not None or time_scale is None):
             raise InputError("no output is named", where=where, mend="add the output's channel, such as output=2")
-        outputs = {int(role.removeprefix("output") or 1): c for role, c in found.items()}
+        if files:
+            return cls(outputs={}, time_scale=time_scale, files=files)
+        outputs = {element_of(role): c for role, c in found.items()}
         return cls(drive=drive, outputs=outputs, time_scale=time_scale)
+
+
+def element_of(role: str) -> int:
+    """The element of an output's role: 1 of `output`, 2 of `output2`."""
+    return int(role.removeprefix("output") or 1)
 
 
 def _time_scale(text: str, where: str) -> float:
@@ -118,6 +136,23 @@ def plain_channels(names: Sequence[str]) -> list[int]:
     return [place for place, name in enumerate(names) if not _COMPUTED.fullmatch(name.strip())]
 
 
+def says_role(name: str) -> bool:
+    """Whether a word in a name says that it is a drive or an output."""
+    words = re.findall(r"[a-z]+", name.casefold())
+    return bool(_IN.search(name)) or any(word in _DRIVE_WORDS or word in _OUTPUT_WORDS for word in words)
+
+
+def is_computed(name: str) -> bool:
+    """Whether a name is that of a computed trace: `F1`, `MATH`, `REF2`."""
+    return _COMPUTED.fullmatch(name.strip()) is not None
+
+
+def is_numbered(name: str) -> bool:
+    """Whether a name is that of a numbered input or computed trace: `CH1`, `3`, `X(CH2)`, `F1`."""
+    bare = name.strip()
+    return _INPUT.fullmatch(bare) is not None or (is_computed(bare) and _ends_in_number(bare) is not None)
+
+
 def _by_words(names: Sequence[str]) -> Assignment | None:
     drives: list[int] = []
     outputs: dict[int, int] = {}
@@ -153,7 +188,7 @@ def _find(names: Sequence[str], channel: str) -> int:
             return same[0]
     raise CaptureError(
         f"the channel {channel} of --channels is not in the file, or is there twice",
-        found=_listed(names),
+        found=listed_channels(names),
         mend="name one of these channels",
     )
 
@@ -165,11 +200,12 @@ def _ends_in_number(name: str) -> re.Match[str] | None:
 def _undecided(names: Sequence[str]) -> CaptureError:
     return CaptureError(
         "it cannot be told which channel is the drive and which the output",
-        found=_listed(names),
+        found=listed_channels(names),
         wanted="one channel (the output), or two (drive, then output)",
         mend="say which with --channels, such as drive=1,output=2",
     )
 
 
-def _listed(names: Sequence[str]) -> str:
+def listed_channels(names: Sequence[str]) -> str:
+    """The channels of a file, for a message."""
     return "channels " + ", ".join(name or f"number {place + 1}" for place, name in enumerate(names))
