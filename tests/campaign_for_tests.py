@@ -158,7 +158,7 @@ class Scope:
 
     def step_V(self, swing_V: float, noise_V: float) -> float:
         """One code: the whole trace, four standard deviations of noise on either side, fills its share of the codes."""
-        return (swing_V + 8 * noise_V) / (self.share * 2**self.bits)
+        return (swing_V + 8 * noise_V) / (self.share * (1 << self.bits))
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -186,7 +186,7 @@ def captured(
     lead = rng.uniform(0.15, 0.5) * pulses.off_s
     total = lead + pulses.n * pulses.period_s
     dt = max(truth.fastest_s / scope.per_edge, total / MOST_SAMPLES)
-    grid = -lead + rng.random() * dt + dt * np.arange(int(total / dt) - 1)
+    grid: Array = -lead + rng.random() * dt + dt * np.arange(int(total / dt) - 1, dtype=np.float64)
     clean = signal(grid)
     noise_V = truth.amplitude_V / scope.snr
     step = scope.step_V(float(np.ptp(clean)), noise_V)
@@ -244,7 +244,7 @@ def least_uncertainties(grid: Array, clean: Array, truth: Truth, pulses: Pulses,
     rise, fall = truth.up[0].lasts_s, truth.down[0].lasts_s
     width = np.hypot(up[0], down[0]) / max(rise, fall)
     found = (up[1], down[1], up[0] / rise, down[0] / fall, float(width))
-    return {name: u / np.sqrt(pulses.n) for name, u in zip(NAMES, found, strict=True)}
+    return {name: u / float(np.sqrt(pulses.n)) for name, u in zip(NAMES, found, strict=True)}
 
 
 def least_of_edge(grid: Array, slope: Array, edge: Edge, until_s: float) -> tuple[float, float]:
@@ -313,15 +313,20 @@ class Outcome:
         found = [f for f in self.figures if not f.flagged and f.beyond(bound) and (f.feasible(bound) or not feasible)]
         return sorted(found, key=lambda f: -abs(np.inf if f.error is None else f.error))
 
+    def least_honest(self, most: int = 8) -> list[Figure]:
+        """Without a flag, and furthest from the truth in their stated uncertainties."""
+        found = [f for f in self.figures if not f.flagged and f.error is not None]
+        return sorted(found, key=lambda f: -abs(f.sigmas))[:most]
+
     def medians(self) -> dict[str, float]:
         return {name: percentiles(self.of(name))[0] for name in NAMES}
 
 
-def run(build: Callable[[int], Case], seeds: Iterable[int]) -> Outcome:
+def run(build: Callable[[int, int], Case], seeds: Iterable[int]) -> Outcome:
     settled: list[Figure] = []
     others: list[Figure] = []
     for seed in seeds:
-        case = build(seed)
+        case = build(seed, 0)
         (settled if case.settles else others).extend(figures_of(case))
     return Outcome(figures=tuple(settled), unsettled=tuple(others))
 
@@ -348,6 +353,24 @@ def table(outcome: Outcome, *, bound: float) -> str:
     lines.append(
         f"beyond {bound:.0%} without a flag, where the noise does not allow it: {[(f.seed, f.name) for f in rest]}"
     )
+    lines.append("furthest from the truth in stated u, without a flag:")
+    lines += [words_of(figure) for figure in outcome.least_honest()]
+    return "\n".join(lines)
+
+
+def again(build: Callable[[int, int], Case], seed: int, times: int = 16) -> str:
+    """One seed captured many times with other noise: what of its errors is a bias, and what scatters."""
+    rows = [figures_of(build(seed, noise)) for noise in range(times)]
+    lines = [f"{seed}: {rows[0][0].words}; flagged {sum(row[0].flagged for row in rows)} of {times}"]
+    for figures in zip(*rows, strict=True):
+        seen = [(f.error, f.sigmas) for f in figures if f.error is not None]
+        if not seen:
+            continue
+        error, sigmas = np.array(seen).T
+        lines.append(
+            f"  {figures[0].name:12} median error {np.median(error):+.2%}, scatter {np.std(error):.2%}, least"
+            f" {figures[0].least:.2%}; in stated u: median {np.median(sigmas):+.1f}, scatter {np.std(sigmas):.1f}"
+        )
     return "\n".join(lines)
 
 
