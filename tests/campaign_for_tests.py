@@ -27,8 +27,9 @@ COUNTING = frozenset({
 """Flags that say that the numbers are worth less; the others speak of conditions and of the bench."""
 
 MOST_SAMPLES = 60_000
-SETTLED_RATIO = 3e-3
-"""Motion over the last 30 % of a state, as a share of the amplitude, up to which it is settled."""
+STILL_RATIO, AGREE_RATIO = 3e-3, 1e-3
+"""A waveform settles where no state moves more over its last 30 %, as a share of the amplitude, nor the levels differ by
+more from pulse to pulse, the rest before the first one among them."""
 
 FEASIBLE_SIGMAS = 5.0
 """A bound is asked for where it is this many of the least standard uncertainties; a reader who knows no shape has up to twice the least."""
@@ -100,18 +101,25 @@ class Truth:
 
 
 def true_edges(time: Array, signal: Array, pulses: Pulses) -> Truth:
-    """A plain evaluation of a waveform without noise that covers all pulses: levels are means over the last 5 % of a state."""
+    """A plain evaluation of a waveform without noise that starts where the first pulse does and covers all.
+
+    Levels are means over the last 5 % of each state.
+    """
     on_s, starts = pulses.on_s, [float(start) for start in pulses.starts_s]
     lit = [part(time, signal, start, start + on_s) for start in starts]
     rest = [part(time, signal, start + on_s, start + pulses.period_s) for start in starts]
-    lit_V, rest_V = (float(np.mean([late_mean(piece[1]) for piece in pieces])) for pieces in (lit, rest))
+    lit_levels = [late_mean(piece[1]) for piece in lit]
+    rest_levels = [float(signal[0]), *(late_mean(piece[1]) for piece in rest)]
+    lit_V, rest_V = float(np.mean(lit_levels)), float(np.mean(rest_levels))
+    amplitude = abs(lit_V - rest_V)
     moved = max(float(np.ptp(late(piece[1], 0.3))) for piece in (*lit, *rest))
+    apart = max(float(np.ptp(lit_levels)), float(np.ptp(rest_levels)))
     return Truth(
         rest_V=rest_V,
         lit_V=lit_V,
         on=tuple(edge_in(piece, rest_V, lit_V, start) for piece, start in zip(lit, starts, strict=True)),
         off=tuple(edge_in(piece, lit_V, rest_V, start + on_s) for piece, start in zip(rest, starts, strict=True)),
-        settles=moved < SETTLED_RATIO * abs(lit_V - rest_V),
+        settles=moved < STILL_RATIO * amplitude and apart < AGREE_RATIO * amplitude,
     )
 
 

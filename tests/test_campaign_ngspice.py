@@ -156,9 +156,11 @@ class Switch:
 
     @property
     def slowest_s(self) -> float:
+        """A floating base is emptied by its own current alone, so that the collector comes to rest as 1 / t."""
         base = self.bf * 0.026 * self.load_ohm / self.supply_V * (self.cje_F + self.diode_F + self.cjc_F)
-        stored = (1 + self.br) * self.tf_s * self.bf / (1 + self.bf) + self.br * self.tr_s
-        return 60 * base + 12 * self.bf * (self.tf_s + self.load_ohm * self.cjc_F) + 20 * stored
+        stored = (1 + self.br) * self.tf_s + self.br * self.tr_s
+        emptied = 200 * base + 10 * self.base_ohm * (self.cje_F + self.diode_F) if self.base_ohm else 4000 * base
+        return emptied + 12 * self.bf * (self.tf_s + self.load_ohm * self.cjc_F) + 20 * stored
 
     def netlist(self, light: str) -> list[str]:
         base = [f"Rbe base 0 {self.base_ohm:g}"] if self.base_ohm else []
@@ -264,9 +266,9 @@ def read_raw(content: bytes) -> tuple[Array, Array]:
 
 
 def settling_s(time: Array, signal: Array, start: float, end: float) -> float:
-    """Time from a switching until the signal stays within 1 % of where it ends."""
+    """Time from a switching until the signal stays within 0.1 % of where it ends."""
     a, b = np.searchsorted(time, (start, end))
-    away = np.abs(signal[a:b] - signal[b - 1]) > 0.01 * np.ptp(signal)
+    away = np.abs(signal[a:b] - signal[b - 1]) > 0.001 * np.ptp(signal)
     return float(time[a + int(np.flatnonzero(away)[-1]) + 1] - start)
 
 
@@ -294,11 +296,12 @@ def random_lit(rng: np.random.Generator) -> tuple[Lit, float]:
         circuit, on, off = drawn(rng)
         long_s = circuit.slowest_s + 1.2 * max(on.whole_s, off.whole_s)
         trial = Pulses(on_s=long_s, off_s=long_s, n=1)
-        time, output = even(*simulate(circuit, trial, on, off, long_s / 300), trial, 40_000)
+        time, output = simulate(circuit, trial, on, off, long_s / 300)
+        time, output = time[time >= 0], output[time >= 0]
         settle_on, settle_off = settling_s(time, output, 0, long_s), settling_s(time, output, long_s, 2 * long_s)
-        share = rng.uniform(2, 8) if rng.random() < 0.93 else rng.uniform(0.4, 0.9)
+        share = rng.uniform(1.2, 4) if rng.random() < 0.93 else rng.uniform(0.2, 0.7)
         pulses = Pulses(
-            on_s=max(settle_on * share, on.whole_s), off_s=max(settle_off * rng.uniform(2, 8), off.whole_s),
+            on_s=max(settle_on * share, on.whole_s), off_s=max(settle_off * rng.uniform(1.2, 4), off.whole_s),
             n=int(rng.integers(1, 6)),
         )  # fmt: skip
         fastest = true_edges(time, output, trial).fastest_s
@@ -347,7 +350,7 @@ def outcome(seeds: range) -> Outcome:
 
 
 @pytest.mark.skipif(not has_ngspice(), reason="ngspice is not installed")
-@pytest.mark.parametrize("seed", [2, 10, 16, 81, 102, 128, 213])
+@pytest.mark.parametrize("seed", [2, 5, 20, 57, 102, 152, 183])
 def test_simulated_circuits_of_a_handful_of_seeds_are_measured_within_three_per_cent(seed: int) -> None:
     """Source: ngspice; definitions of IEEE Std 181. Of the campaign's seeds those where the noise leaves room, so that the campaign does not rot."""
     for figure in figures_of(build(seed)):
