@@ -193,7 +193,7 @@ def test_steps_of_linear_systems_of_a_handful_of_seeds_are_measured_within_two_p
 
 @pytest.mark.campaign
 def test_steps_of_linear_systems_are_measured_within_two_per_cent_or_flagged_over_many_seeds() -> None:
-    """Source: Nise, Control Systems Engineering; IEEE Std 181. The bound is asked for where five times the least u allows it."""
+    """Source: Nise, Control Systems Engineering; IEEE Std 181. Errors within five times the least u are excused."""
     found = outcome(range(SYSTEMS))
     print("\n" + table(found, bound=BOUND))
-    assert found.failures(BOUND) == []
+    assert found.beyond(BOUND, excused=False) == []

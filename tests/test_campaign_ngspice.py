@@ -360,8 +360,8 @@ def test_simulated_circuits_of_a_handful_of_seeds_are_measured_within_three_per_
 @pytest.mark.campaign
 @pytest.mark.skipif(not has_ngspice(), reason="ngspice is not installed")
 def test_simulated_circuits_are_measured_within_three_per_cent_or_flagged_over_many_seeds() -> None:
-    """Source: ngspice; definitions of IEEE Std 181. The bound is asked for where five times the least u allows it."""
+    """Source: ngspice; definitions of IEEE Std 181. Errors within five times the least u are excused."""
     found = outcome(range(CIRCUITS))
     print("\n" + table(found, bound=BOUND))
     assert max(found.medians().values()) < MEDIAN
-    assert found.failures(BOUND) == []
+    assert found.beyond(BOUND, excused=False) == []
