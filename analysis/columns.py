@@ -15,7 +15,7 @@ QUANTITIES: tuple[str, ...] = (
 )  # fmt: skip
 OPTIONAL_QUANTITIES: tuple[str, ...] = (
     "on_delay_s", "on_time_s", "storage_time_s", "off_time_s", "current_transfer_ratio", "output_low_V",
-    "photocurrent_A", "responsivity_A_per_W",
+    "photocurrent_A", "responsivity_A_per_W", "seen_rise_time_s", "seen_fall_time_s",
 )  # fmt: skip
 DEVICE: tuple[str, ...] = ("device_kind", "output_connection")
 """Added columns: what the fit and the verdict need to know of the device."""

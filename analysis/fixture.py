@@ -12,6 +12,20 @@ LOAD_MATCH_RATIO = 0.02
 """A nominal load within 2 % of the one asked for is that load (common practice, no source)."""
 
 
+CURRENT_MATCH_RATIO = 0.1
+"""Difference of emitter current from that of the bench response that is still taken for the same (common practice, no source)."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CapturedEdge:
+    """A reference edge as measured from a capture: its 10-90 % time, and the part of it before the 50 % point."""
+
+    time_s: float
+    u_time_s: float
+    share: float | None = None
+    u_share: float = 0.0
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Load:
     """One load resistor as measured, with the capacitance in parallel with it: scope input, probe, cable, socket."""
@@ -25,13 +39,26 @@ class Load:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Response:
-    """Emitter and scope together: 10-90 % times of the on and the off edge, and where they hold."""
+    """Emitter and scope together: 10-90 % times of the on and the off edge, and where they hold.
+
+    `rise_share` and `fall_share` are the parts of those times before the 50 % point, where captured edges told them.
+    """
 
     rise_time_s: float
     fall_time_s: float
     u_rise_time_s: float = 0.0
     u_fall_time_s: float = 0.0
     emitter_current_A: float | None = None
+    rise_share: float | None = None
+    fall_share: float | None = None
+    u_rise_share: float = 0.0
+    u_fall_share: float = 0.0
+
+    def holds_at(self, emitter_current_A: float | None) -> bool:
+        """Whether it holds at an emitter current; where either is not known, it is taken to."""
+        if self.emitter_current_A is None or emitter_current_A is None:
+            return True
+        return abs(emitter_current_A / self.emitter_current_A - 1) <= CURRENT_MATCH_RATIO
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -44,6 +71,7 @@ class Fixture:
     u_scope_input_ohm: float = 0.0
     channel_skew_s: float = 0.0
     u_channel_skew_s: float = 0.0
+    trigger_jitter_s: float = 0.0
     u_gain_ratio: float = 0.0
     u_timebase_ratio: float = 0.0
     offset_V: float = 0.0

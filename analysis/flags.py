@@ -51,7 +51,7 @@ _ALL = (
     ),
     Flag(
         code="bench_limited",
-        sentence="The edge is not clearly slower than emitter and scope; what remains is mostly the bench.",
+        sentence="The edge seen is not clearly slower than emitter and scope: what is left for the device is little, or only a bound.",
         mend="Use a faster emitter or scope, or read the value as an upper bound.",
     ),
     Flag(
@@ -161,7 +161,7 @@ _ALL = (
     ),
     Flag(
         code="emitter_current_differs",
-        sentence="The emitter current is not that at which the bench response was taken.",
+        sentence="The emitter current is not that at which the bench response was taken; the bench is still in the edge times.",
         mend="Take the bench response at this emitter current.",
     ),
     Flag(

@@ -38,8 +38,8 @@ class Listing:
 
 
 _LISTED = (
-    "amplitude_V", "rise_time_s", "fall_time_s", "t_plh_s", "t_phl_s", "width_out_s", "duty_cycle_distortion",
-    "on_delay_s", "on_time_s", "storage_time_s", "off_time_s", "dark_current_A",
+    "amplitude_V", "rise_time_s", "fall_time_s", "seen_rise_time_s", "seen_fall_time_s", "t_plh_s", "t_phl_s",
+    "width_out_s", "duty_cycle_distortion", "on_delay_s", "on_time_s", "storage_time_s", "off_time_s", "dark_current_A",
 )  # fmt: skip
 
 

@@ -17,7 +17,7 @@ from darkedge.analysis.files.fixture_file import read_fixture
 from darkedge.analysis.files.limits_file import find_limits, read_limits
 from darkedge.analysis.files.lot_file import read_lot
 from darkedge.analysis.files.plan_file import read_plan
-from darkedge.analysis.measurement import Estimate
+from darkedge.analysis.fixture import CapturedEdge
 
 PLAN = """format = "darkedge-plan 1"
 title = "Pick-up detector, first look"
@@ -119,8 +119,8 @@ size = 200
 """
 
 
-def edge_time(path: Path, quantity: str) -> Estimate:
-    return Estimate(value=10e-9 if quantity == "rise_time_s" else 15e-9, u=1e-10)
+def edge_time(path: Path, quantity: str) -> CapturedEdge:
+    return CapturedEdge(time_s=10e-9 if quantity == "rise_time_s" else 15e-9, u_time_s=1e-10, share=0.3, u_share=0.01)
 
 
 READERS: dict[str, tuple[str, Callable[[Path], object], type[InputError]]] = {

@@ -24,12 +24,12 @@ from darkedge.analysis.files.names import NamePattern
 from darkedge.analysis.files.roles import ChannelRoles
 from darkedge.analysis.files.runs import RunContext, read_run_context
 from darkedge.analysis.files.tables import is_table, read_table
-from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
-from darkedge.analysis.measurement import Estimate, Measurement
+from darkedge.analysis.fixture import UNKNOWN_FIXTURE, CapturedEdge, Fixture
+from darkedge.analysis.measurement import Measurement
 from darkedge.analysis.measuring import GROUP, StillTrace, finish_measuring, measure_group, refused_measurement
 from darkedge.analysis.plan import Plan
-from darkedge.analysis.waveform.measure import measure_pulse_capture
 from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels
+from darkedge.analysis.waveform.reference_captures import channel_skew, reference_edge
 
 Progress = Callable[[int, int], None]
 
@@ -107,7 +107,7 @@ def take_in(
     pattern = None if names is None else NamePattern(names)
     roles = None if channels is None else ChannelRoles.parse(channels)
     stated = None if conditions is None else read_conditions(conditions)
-    given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time)
+    given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time, skew=_skew)
     tables = [path for path in paths if path.is_file() and is_table(path) and not is_archive(path)]
     rest = [path for path in paths if path not in tables]
     if tables and (pattern or stated):
@@ -173,7 +173,7 @@ def pack(
     pattern = None if names is None else NamePattern(names)
     roles = None if channels is None else ChannelRoles.parse(channels)
     stated = None if conditions is None else read_conditions(conditions)
-    given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time)
+    given = None if fixture is None else read_fixture(fixture, edge_time=_edge_time, skew=_skew)
     joining = SpreadFiles(roles=roles, names=pattern, conditions=stated)
     reading = _Reading(find_captures(paths, joining), pattern, stated, roles, given)
     reading.check_stated()
@@ -256,7 +256,7 @@ class _Reading:
         for source in sources:
             folder = source.run_folder
             if folder is not None and folder not in self.contexts:
-                self.contexts[folder] = read_run_context(folder, edge_time=_edge_time)
+                self.contexts[folder] = read_run_context(folder, edge_time=_edge_time, skew=_skew)
             fixture = given or self._kept(source) or (None if folder is None else self.contexts[folder].fixture)
             if fixture is not None:
                 self.fixtures[source.name] = fixture
@@ -347,15 +347,23 @@ def fixture_of(plan: Plan) -> Fixture:
     """
     if plan.fixture_file is None:
         return UNKNOWN_FIXTURE
-    return read_fixture(Path(plan.source).parent / plan.fixture_file, edge_time=_edge_time)
+    return read_fixture(Path(plan.source).parent / plan.fixture_file, edge_time=_edge_time, skew=_skew)
 
 
-def _edge_time(path: Path, quantity: str) -> Estimate | None:
+def _edge_time(path: Path, quantity: str) -> CapturedEdge | None:
     """Measure one edge of a captured reference response."""
+    return reference_edge(_reference(path), rising=quantity == "rise_time_s")
+
+
+def _skew(path: Path) -> tuple[float, float] | None:
+    """Measure the skew of a reference capture in which both channels see the same signal."""
+    return channel_skew(_reference(path))
+
+
+def _reference(path: Path) -> Capture:
     try:
-        rows = measure_pulse_capture(read_capture(path))
+        return read_capture(path)
     except CaptureError as error:
         raise FixtureError(
             error.what, where=error.where, found=error.found, wanted=error.wanted, mend=error.mend
         ) from error
-    return rows[0].quantities.get(quantity)

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from darkedge.analysis.errors import InputError
-from darkedge.analysis.files.fixture_file import EdgeTime, read_fixture
+from darkedge.analysis.files.fixture_file import EdgeTime, Skew, read_fixture
 from darkedge.analysis.files.lot_file import NAME as LOT_NAME
 from darkedge.analysis.files.lot_file import Lot, read_lot
 from darkedge.analysis.files.plan_file import read_plan
@@ -28,7 +28,7 @@ class RunContext:
     lot: Lot | None
 
 
-def read_run_context(folder: Path, *, edge_time: EdgeTime) -> RunContext:
+def read_run_context(folder: Path, *, edge_time: EdgeTime, skew: Skew) -> RunContext:
     """Read what stands in and above a run folder. A fixture kept in the run goes before the one that the plan points at.
 
     Raises
@@ -51,5 +51,5 @@ def read_run_context(folder: Path, *, edge_time: EdgeTime) -> RunContext:
                 found=plan.fixture_file,
                 mend="put it there, or correct the path (it is relative to the plan)",
             )
-        fixture = read_fixture(path, edge_time=edge_time)
+        fixture = read_fixture(path, edge_time=edge_time, skew=skew)
     return RunContext(folder=folder, plan=plan, fixture=fixture, lot=lot)

@@ -130,11 +130,13 @@ def _why_none(rows: int, driven: int, spoiled: Counter[str], usable: int) -> str
 
 def _arrays(rows: Sequence[Measurement], fixture: Fixture, spoiled: Counter[str]) -> EdgeData:
     found = [
-        (m, quantity, m.quantities[quantity], m.quantities["amplitude_V"])
+        (m, quantity, time, m.quantities["amplitude_V"])
         for m in rows
         for quantity in ("rise_time_s", "fall_time_s")
-        if m.value(quantity) and m.quantities[quantity].u and m.value("amplitude_V")
-    ]
+        # The fit composes the bench itself, so it takes edges as the scope showed them.
+        if (time := m.quantities.get(f"seen_{quantity}", m.quantities.get(quantity))) is not None
+        and time.value and time.u and m.value("amplitude_V")
+    ]  # fmt: skip
     nominal = sorted({m.conditions.load_ohm or 0.0 for m, *_ in found})
     currents = sorted({m.conditions.emitter_current_A for m, *_ in found}, key=lambda c: c or 0.0)
     inputs = [m.conditions.input_ohm for m, *_ in found]

@@ -14,7 +14,7 @@ QUANTITY_WORDS = {
     "duty_cycle_distortion": "DCD", "jitter_s": "jitter", "dark_current_A": "dark current",
     "on_delay_s": "td", "on_time_s": "ton", "storage_time_s": "ts", "off_time_s": "toff",
     "current_transfer_ratio": "CTR", "output_low_V": "out low", "photocurrent_A": "photocurrent",
-    "responsivity_A_per_W": "responsivity",
+    "responsivity_A_per_W": "responsivity", "seen_rise_time_s": "rise as seen", "seen_fall_time_s": "fall as seen",
 }  # fmt: skip
 CONDITION_WORDS = {
     "bias_V": "bias", "load_ohm": "load", "emitter_current_A": "emitter", "pulse_width_s": "pulse",
