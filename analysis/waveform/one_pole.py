@@ -10,10 +10,13 @@ A bin of few samples shows F blunted by the variance of their places, (c^2 - 1) 
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from scipy.special import erfcx, ndtr
 
 from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.waveform.edges import IntArray
 
 _ROOT_HALF = float(np.sqrt(0.5))
 _ROOT_TWO_PI = float(np.sqrt(2 * np.pi))
@@ -95,23 +98,54 @@ def instants(parameters: FloatArray, shares: FloatArray, first: FloatArray) -> t
     gradient : array, shape (n, k, 3)
     """
     x0, tau, s, _, _ = _unpacked(parameters)
+
+    def course(x: FloatArray, rows: IntArray) -> tuple[FloatArray, FloatArray]:
+        value, rest, _, _ = parts(x, x0[rows], tau[rows], s[rows])
+        return value, rest / tau[rows]
+
     low, high = np.tile(x0 - 9 * s, (1, shares.shape[1])), x0 + 9 * s + tau * (1 - np.log1p(-shares))
-    x = np.clip(first, low, high)
-    rows = np.arange(x.shape[0])
-    for _ in range(60):  # Newton's method, kept inside a bracket that shrinks; a row that is found is left alone
-        at, x0_, tau_, s_, wanted = x[rows], x0[rows], tau[rows], s[rows], shares[rows]
-        value, rest, _, _ = parts(at, x0_, tau_, s_)
-        below = value < wanted
-        low[rows], high[rows] = np.where(below, at, low[rows]), np.where(below, high[rows], at)
-        step = at + (wanted - value) * tau_ / np.maximum(rest, 1e-300)
-        x[rows] = np.where((step > low[rows]) & (step < high[rows]), step, 0.5 * (low[rows] + high[rows]))
-        rows = rows[np.any(np.abs(x[rows] - at) > 1e-9 * (s_ + tau_), axis=1)]
-        if rows.size == 0:
-            break
-    value, rest, bell, u = parts(x, x0, tau, s)
+    x = seek(course, shares, first, low=low, high=high, scale=s + tau)
+    _, rest, bell, u = parts(x, x0, tau, s)
     slope = np.maximum(rest / tau, 1e-12)
     by = (-rest / tau, -rest * ((x - x0) / tau - u * u - 1) - bell * u, bell * u - rest * u * u)
     return x, np.stack([-d / slope for d in by], axis=2)
+
+
+def seek(
+    course: Callable[[FloatArray, IntArray], tuple[FloatArray, FloatArray]],
+    shares: FloatArray,
+    first: FloatArray,
+    *,
+    low: FloatArray,
+    high: FloatArray,
+    scale: FloatArray,
+) -> FloatArray:
+    """Where rising curves pass their shares, shape (n, k), by Newton's method inside a bracket that shrinks.
+
+    Parameters
+    ----------
+    course : callable
+        Value and slope of the curves of some rows at x (rows, k).
+    shares, first : arrays, shape (n, k)
+        What is sought, and where to begin.
+    low, high : arrays, shape (n, k)
+        Where the curves are surely below and above.
+    scale : array, shape (n, 1)
+        Width of each curve.
+    """
+    x = np.clip(first, low, high)
+    rows = np.arange(x.shape[0])
+    for _ in range(60):  # a row that is found is left alone
+        at, wanted = x[rows], shares[rows]
+        value, slope = course(at, rows)
+        below = value < wanted
+        low[rows], high[rows] = np.where(below, at, low[rows]), np.where(below, high[rows], at)
+        step = at + (wanted - value) / np.maximum(slope, 1e-300)
+        x[rows] = np.where((step > low[rows]) & (step < high[rows]), step, 0.5 * (low[rows] + high[rows]))
+        rows = rows[np.any(np.abs(x[rows] - at) > 1e-9 * scale[rows], axis=1)]
+        if rows.size == 0:
+            break
+    return x
 
 
 def bounded(parameters: FloatArray) -> FloatArray:

@@ -14,10 +14,12 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
 from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.waveform import one_pole, two_poles
 from darkedge.analysis.waveform.binned import FINE, BinnedEdges, CutEdges, bin_edges, cut_edges
 from darkedge.analysis.waveform.edges import TEN_NINETY, BoolArray, IntArray, Transitions
 from darkedge.analysis.waveform.first_look import FirstLook
@@ -33,9 +35,6 @@ from darkedge.analysis.waveform.one_pole import (
     SWING,
     WIDEST,
     bounded,
-    by_means,
-    by_points,
-    instants,
 )
 from darkedge.analysis.waveform.shapes import first_guess
 from darkedge.analysis.waveform.whitening import whitener, whitening_matrix
@@ -57,6 +56,9 @@ DYING = 4.0
 
 LEAST_INDEPENDENT = 20.0
 """Independent samples at rest from which slow noise is believed to be noise."""
+
+NEAR = 0.1
+"""Change of a logarithm up to which the slope at the fit leads to the joint levels."""
 
 MISFIT = 3.5
 """Standard deviations of chi-squared beyond which edges are not of the family, or their plateaus not level."""
@@ -130,7 +132,7 @@ class SettledEdges:
             if rows.size == 0:
                 continue
             weight = member.weight[rows]
-            at, gradient = instants(
+            at, gradient = member.shape.instants(
                 member.parameters[rows], shares[rows], np.log(shares[rows] / (1 - shares[rows])) / 4.4
             )
             x[rows] += weight[:, None] * at
@@ -146,6 +148,19 @@ class SettledEdges:
         return np.asarray(np.max([member.weight for member in self.families], axis=0) < 1.0)
 
 
+class Shape(Protocol):
+    """What a member of the family can do; `one_pole` and `two_poles` are such."""
+
+    def by_points(self, x: FloatArray, blur: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Values and derivatives of bins of few samples."""
+
+    def by_means(self, bounds: FloatArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Values and derivatives of bins that hold means."""
+
+    def instants(self, parameters: FloatArray, shares: FloatArray, first: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Where edges pass shares of their way, and the gradients of that."""
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class FamilyMember:
     """One member of the family fitted to some edges.
@@ -158,13 +173,21 @@ class FamilyMember:
     covariance: FloatArray
     by_levels: FloatArray
     weight: FloatArray
+    shape: Shape = one_pole
 
     def select(self, rows: slice) -> FamilyMember:
         """Some of the edges."""
         return FamilyMember(
+            shape=self.shape,
             parameters=self.parameters[rows], covariance=self.covariance[rows], by_levels=self.by_levels[rows],
             weight=self.weight[rows],
         )  # fmt: skip
+
+
+MEMBERS: tuple[tuple[Shape, tuple[int, ...]], ...] = (
+    (one_pole, ()), (one_pole, (LN_S,)), (one_pole, (LN_TAU,)), (two_poles, ()),
+)  # fmt: skip
+"""One pole behind a Gaussian front end; one pole alone; a Gaussian edge alone; two poles: shape, and parameters held."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -265,12 +288,6 @@ class _Parted:
     given: FloatArray
     by_volts: FloatArray
 
-    def on_levels(self, parameters: FloatArray, low_high_V: FloatArray, weight: FloatArray) -> FamilyMember:
-        """Put every edge on given levels (n, 2)."""
-        moved = parameters.copy()
-        moved[:, :START] += (self.by_volts @ (low_high_V - self.low_high_V)[:, :, None])[:, :, 0]
-        return FamilyMember(parameters=bounded(moved), covariance=self.given, by_levels=self.by_volts, weight=weight)
-
 
 def _put(fits: WhiteFits, new: WhiteFits, rows: IntArray) -> WhiteFits:
     """Put newer fits in the place of some rows."""
@@ -346,7 +363,7 @@ class _Job:
         if sharp.size == 0:
             return self._fit(start, every)
         soft = np.flatnonzero(self.n_samples >= FEWEST_TO_FIT)
-        fits = [self._fit(start[sharp], sharp, held=LN_TAU)] + ([self._fit(start[soft], soft)] if soft.size else [])
+        fits = [self._fit(start[sharp], sharp, held=(LN_TAU,))] + ([self._fit(start[soft], soft)] if soft.size else [])
         order = np.argsort(np.concatenate((sharp, soft)))
         return WhiteFits(**{
             name: np.concatenate([getattr(fit, name) for fit in fits])[order] for name in WhiteFits.__dataclass_fields__
@@ -366,7 +383,10 @@ class _Job:
         ])  # fmt: skip
 
     def _rivals(self, fits: WhiteFits) -> list[tuple[WhiteFits, FloatArray]]:
-        """The whole family and its two simpler members, one pole alone and a Gaussian edge alone, each with its Akaike weight (n,)."""
+        """The whole family, its two simpler members, and two poles, each with its Akaike weight (n,).
+
+        The members are in the order of `MEMBERS`. Two poles are tried only where neither one pole nor a Gaussian edge alone will do.
+        """
         rows = np.flatnonzero(self.n_samples >= FEWEST_TO_FIT)
         found = [fits]
         width = np.exp(fits.parameters[:, LN_TAU : LN_S + 1])
@@ -375,12 +395,19 @@ class _Job:
             start = fits.parameters.copy()
             start[:, held] = np.log(NARROWEST)
             start[:, other] = np.log(np.clip(spread, NARROWEST, WIDEST))
-            found.append(_put(fits, self._fit(bounded(start)[rows], rows, held=held), rows))
-        criterion = np.stack([
-            np.where(fit.good, np.sum(fit.residual**2, axis=1) / self.sigma**2 + 2 * (k == 0), np.inf)
-            for k, fit in enumerate(found)
-        ])  # fmt: skip
-        criterion[1:, self.n_samples < FEWEST_TO_FIT] = np.inf
+            found.append(_put(fits, self._fit(bounded(start)[rows], rows, held=(held,)), rows))
+        criterion = np.full((len(MEMBERS), self.n_samples.size), np.inf)
+        for k, fit in enumerate(found):
+            some = slice(None) if k == 0 else rows
+            criterion[k, some] = self._criterion(fit, free=k == 0)[some]
+        mixed = rows[np.min(criterion[1:3, rows], axis=0) > criterion[0, rows]]
+        start = fits.parameters.copy()
+        slower = np.clip(width[:, 0], 0.75 * spread, 0.995 * spread)
+        start[:, LN_TAU], start[:, LN_S] = np.log(slower), np.log(np.sqrt(spread**2 - slower**2))
+        found.append(fits)
+        if mixed.size:
+            found[-1] = _put(fits, self._fit(bounded(start)[mixed], mixed, shape=two_poles), mixed)
+            criterion[3, mixed] = self._criterion(found[-1], free=True)[mixed]
         least = np.min(criterion, axis=0)
         weight = np.exp(-0.5 * np.minimum(criterion - np.where(np.isfinite(least), least, 0.0), 1e3))
         weight = np.where(weight < LEAST_WEIGHT, 0.0, weight)
@@ -388,43 +415,47 @@ class _Job:
         weight /= np.sum(weight, axis=0)
         return list(zip(found, weight, strict=True))
 
-    def _model(self, rows: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+    def _criterion(self, fit: WhiteFits, *, free: bool) -> FloatArray:
+        """Akaike's criterion of each edge, less what all members have in common; `free`: one parameter more than the simpler members."""
+        return np.where(fit.good, np.sum(fit.residual**2, axis=1) / self.sigma**2 + 2 * free, np.inf)
+
+    def _model(self, rows: IntArray, parameters: FloatArray, member: Shape = one_pole) -> tuple[FloatArray, FloatArray]:
         """Values and derivatives of the bins of some edges."""
         means = self.means[rows]
         if bool(np.all(means)):
-            return by_means(self.bounds_x[rows], parameters)
+            return member.by_means(self.bounds_x[rows], parameters)
         if not bool(np.any(means)):
-            return self._of_points(rows, parameters)
+            return self._of_points(rows, parameters, member)
         value = np.empty((rows.size, self.bins.y.shape[1]))
         derivative = np.empty((rows.size, 5, self.bins.y.shape[1]))
-        value[means], derivative[means] = by_means(self.bounds_x[rows[means]], parameters[means])
-        value[~means], derivative[~means] = self._of_points(rows[~means], parameters[~means])
+        value[means], derivative[means] = member.by_means(self.bounds_x[rows[means]], parameters[means])
+        value[~means], derivative[~means] = self._of_points(rows[~means], parameters[~means], member)
         return value, derivative
 
-    def _of_points(self, rows: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
+    def _of_points(self, rows: IntArray, parameters: FloatArray, member: Shape) -> tuple[FloatArray, FloatArray]:
         """Values and derivatives of bins that hold a sample or two across the edge, and means before and after it."""
         bounds = self.bounds_x[rows]
         parts = (
-            by_means(bounds[:, : FINE.start + 1], parameters),
-            by_points(self.fine_x[rows], self.fine_blur[rows], parameters),
-            by_means(bounds[:, FINE.stop :], parameters),
+            member.by_means(bounds[:, : FINE.start + 1], parameters),
+            member.by_points(self.fine_x[rows], self.fine_blur[rows], parameters),
+            member.by_means(bounds[:, FINE.stop :], parameters),
         )
         return np.concatenate([value for value, _ in parts], axis=1), np.concatenate([d for _, d in parts], axis=2)
 
-    def _fit(self, start: FloatArray, rows: IntArray, *, held: int | None = None) -> WhiteFits:
-        """Fit some edges, their bins whitened as far as the noise is known; the parameter `held` stays."""
+    def _fit(
+        self, start: FloatArray, rows: IntArray, *, held: tuple[int, ...] = (), shape: Shape = one_pole
+    ) -> WhiteFits:
+        """Fit some edges, their bins whitened as far as the noise is known; the parameters `held` stay."""
 
         def model(some: IntArray, parameters: FloatArray) -> tuple[FloatArray, FloatArray]:
             which = rows[some]
-            value, derivative = self._model(which, parameters)
-            if held is not None:
-                derivative[:, held] = 0.0
+            value, derivative = self._model(which, parameters, shape)
+            derivative[:, list(held)] = 0.0
             return self._whitened(which, self.bins.y[which] - value, derivative)
 
         fits = fit_white_rows(model, start, entries=self.entries[rows], bounded=bounded)
-        if held is not None:
-            fits.inverse[:, held, :] = 0.0
-            fits.inverse[:, :, held] = 0.0
+        fits.inverse[:, list(held), :] = 0.0
+        fits.inverse[:, :, list(held)] = 0.0
         return fits
 
     def _whitened(self, rows: IntArray, residual: FloatArray, derivative: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -503,8 +534,8 @@ class _Job:
         # Noise as slow as the plateaus are long may as well be a tail.
         good &= ~slow & (swing > np.maximum(5.0 * np.array([n.sigma_V for n in noises]), 2.0 * codes))
         members = tuple(
-            p.on_levels(fit.parameters, joint[cut.channel], weight)
-            for p, (fit, weight) in zip(parted, rivals, strict=True)
+            self._on_levels(p, fit, joint[cut.channel], weight, *member)
+            for p, (fit, weight), member in zip(parted, rivals, MEMBERS, strict=True)
         )
         edges = self._edges(joint, members)
         transitions = edges.transitions(fractions)
@@ -525,6 +556,46 @@ class _Job:
                 )
             )
         return found
+
+    def _on_levels(
+        self,
+        parted: _Parted,
+        fits: WhiteFits,
+        low_high_V: FloatArray,
+        weight: FloatArray,
+        shape: Shape,
+        held: tuple[int, ...],
+    ) -> FamilyMember:
+        """Put every edge on given levels (n, 2): along the slope where they are near, by another fit where they are not."""
+        moved = fits.parameters.copy()
+        moved[:, :START] += (parted.by_volts @ (low_high_V - parted.low_high_V)[:, :, None])[:, :, 0]
+        given, by_volts = parted.given, parted.by_volts
+        far = np.max(np.abs(moved[:, LN_TAU : LN_S + 1] - fits.parameters[:, LN_TAU : LN_S + 1]), axis=1) > NEAR
+        rows = np.flatnonzero(far & (weight > 0) & (self.n_samples >= FEWEST_TO_FIT))
+        if rows.size:
+            ends, per_volt = self._in_progress(low_high_V, rows)
+            start = fits.parameters[rows].copy()
+            start[:, START], start[:, SWING] = ends[:, 0], ends[:, 1] - ends[:, 0]
+            again = self._fit(bounded(start), rows, held=(*held, START, SWING), shape=shape)
+            _, derivative = self._model(rows, again.parameters, shape)
+            _, derivative = self._whitened(rows, np.zeros((rows.size, derivative.shape[2])), derivative)
+            of_ends = np.stack((derivative[:, START] - derivative[:, SWING], derivative[:, SWING]), axis=1)
+            inverse = again.inverse[:, :START, :START]
+            gain = -inverse @ (derivative[:, :START] @ of_ends.transpose(0, 2, 1))
+            moved[rows] = again.parameters
+            given, by_volts = given.copy(), by_volts.copy()
+            given[rows] = inverse * (self.sigma[rows] ** 2)[:, None, None]
+            by_volts[rows] = gain @ per_volt
+        return FamilyMember(parameters=bounded(moved), covariance=given, by_levels=by_volts, weight=weight, shape=shape)
+
+    def _in_progress(self, low_high_V: FloatArray, rows: IntArray) -> tuple[FloatArray, FloatArray]:
+        """Levels before and after some edges as progress (n, 2), and what a volt of low and high level is in it (n, 2, 2)."""
+        cut = self.cut
+        low, amplitude, rising = cut.low_V[rows], cut.amplitude_V[rows], cut.rising[rows]
+        upward = (low_high_V[rows] - low[:, None]) / amplitude[:, None]
+        ends = np.where(rising[:, None], upward, 1.0 - upward[:, ::-1])
+        swap = np.where(rising[:, None, None], np.eye(2), -np.eye(2)[::-1])
+        return ends, swap / amplitude[:, None, None]
 
     def _parted(self, fits: WhiteFits) -> _Parted:
         """What a fit says of the levels of each edge, and of its shape once the levels are known."""
