@@ -20,7 +20,7 @@ FixtureFor = Callable[[str], Fixture]
 """Gives the fixture that holds for a capture, by the capture's name."""
 
 
-GROUP = 96
+GROUP = 48
 """Captures that are read and measured together."""
 
 MOST_SAMPLES = 2_000_000

@@ -208,7 +208,10 @@ def take_each(reading: _Reading, *, jobs: int) -> Iterator[Taken]:
         `jobs` is below 1.
     """
     names = list(reading.sources)
-    groups = [names[k : k + GROUP] for k in range(0, len(names), GROUP)]
+    size = min(
+        GROUP, max(1, -(-len(names) // 4))
+    )  # of few sources, small groups: whatever `jobs` is, the groups are the same
+    groups = [names[k : k + size] for k in range(0, len(names), size)]
     if jobs < 1:
         raise InputError("jobs is not a number of processes", found=str(jobs), wanted="1 or more")
     if jobs == 1 or len(groups) < 2:

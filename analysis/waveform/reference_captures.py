@@ -21,7 +21,7 @@ def share_before_half(transitions: Transitions, edges: IntArray) -> tuple[float,
     weights = np.stack((share - 1.0, np.ones_like(share), -share), axis=1) / whole[:, None]
     variance = np.einsum("ek,ekl,el->e", weights, transitions.covariance_s2[edges], weights)
     variance += np.sum((weights * transitions.bend_s[edges]) ** 2, axis=1)
-    return float(np.mean(share)), math.sqrt(float(np.sum(variance))) / edges.size
+    return float(np.mean(share)), math.sqrt(max(float(np.sum(variance)), 0.0)) / edges.size
 
 
 def reference_edge(capture: Capture, *, rising: bool) -> CapturedEdge | None:
@@ -46,7 +46,10 @@ def reference_edge(capture: Capture, *, rising: bool) -> CapturedEdge | None:
     variance = variance + found.bend_s[edges, 0] ** 2 + found.bend_s[edges, 2] ** 2
     share, u_share = share_before_half(found, edges)
     return CapturedEdge(
-        time_s=duration, u_time_s=math.sqrt(float(np.sum(variance))) / edges.size, share=share, u_share=u_share
+        time_s=duration,
+        u_time_s=math.sqrt(max(float(np.sum(variance)), 0.0)) / edges.size,
+        share=share,
+        u_share=u_share,
     )
 
 

@@ -54,6 +54,9 @@ LEAST_WEIGHT = 0.02
 DYING = 4.0
 """Standard deviations by which noise may be larger after an edge than later on."""
 
+PATCHY = 16.0
+"""Power of one stretch at rest over that of another from which slow noise is called ringing or a tail."""
+
 LEAST_INDEPENDENT = 20.0
 """Independent samples at rest from which slow noise is believed to be noise."""
 
@@ -289,6 +292,12 @@ class _Parted:
     by_volts: FloatArray
 
 
+def _is_patchy(rest_V: Sequence[FloatArray]) -> bool:
+    """Whether one stretch at rest is far noisier than another: noise that knows its neighbours and does so is none."""
+    powers = [float(np.var(part)) for part in rest_V if part.size >= 64]
+    return len(powers) > 1 and max(powers) > PATCHY * min(powers)
+
+
 def _put(fits: WhiteFits, new: WhiteFits, rows: IntArray) -> WhiteFits:
     """Put newer fits in the place of some rows."""
     merged = {}
@@ -311,6 +320,8 @@ def _dies_down(rest_V: Sequence[FloatArray], noise: Noise) -> bool:
         first, second = part[:half], part[half:]
         early += float(first @ first) - half * float(first.mean()) ** 2
         late += float(second @ second) - second.size * float(second.mean()) ** 2
+    if noise.correlation.size > 1 and _is_patchy(rest_V):
+        return True
     dof = max(noise.independent / 2, 1.0)
     return early > 0 and math.log(early / max(late, 1e-300)) > DYING * math.sqrt(4 / dof)
 
