@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 
 import numpy as np
-from scipy import stats
+from scipy import special
 
 from darkedge.analysis.captures import FloatArray
 
@@ -56,4 +57,5 @@ def propagate(model: Model, at: FloatArray, covariance: FloatArray) -> tuple[Flo
 
 def coverage_factor(probability: float, freedom: float) -> float:
     """Two-sided coverage factor: the t quantile of JCGM 100:2008, table G.2."""
-    return float(stats.t.ppf((1 + probability) / 2, freedom))
+    share = (1 + probability) / 2
+    return float(special.ndtri(share) if math.isinf(freedom) else special.stdtrit(freedom, share))

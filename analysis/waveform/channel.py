@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Hashable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -82,18 +82,23 @@ def measure_channel(
 
 
 def measure_channels(
-    records: Sequence[Record], *, fractions: tuple[float, ...] = TEN_NINETY, volts_per_code: Sequence[float | None]
+    records: Sequence[Record],
+    *,
+    fractions: tuple[float, ...] = TEN_NINETY,
+    volts_per_code: Sequence[float | None],
+    pools: Sequence[Hashable] | None = None,
 ) -> list[Channel | None]:
     """Measure several channels, which is quicker than one by one; see `measure_channel`.
 
     Channels whose pulses settle and whose edges are of the common family are fitted together (`settled`); what does not settle, is uneven,
-    or leaves more than noise is measured by itself.
+    or leaves more than noise is measured by itself. Channels with the same entry in `pools` were taken alike.
     """
     looks = [look_at(record, volts_per_code=step) for record, step in zip(records, volts_per_code, strict=True)]
     even = [k for k, look in enumerate(looks) if look is not None and look.is_even]
+    of_even = None if pools is None else [pools[k] for k in even]
     found: list[Channel | None] = [None] * len(records)
     settled = dict(
-        zip(even, fit_settled([look for k in even if (look := looks[k]) is not None], fractions), strict=True)
+        zip(even, fit_settled([look for k in even if (look := looks[k]) is not None], fractions, of_even), strict=True)
     )
     for k, look in enumerate(looks):
         if look is not None:
@@ -175,5 +180,5 @@ def _is_drift(refined: Refined, changes: Changes) -> bool:
 
 
 def with_codes(noise: Noise, step_V: float) -> Noise:
-    """Noise of a sample on an edge, which is never less than the rounding to codes, step / sqrt(12)."""
-    return replace(noise, sigma_V=max(noise.sigma_V, step_V / float(np.sqrt(12))))
+    """Noise of a sample on an edge: never less than the rounding to codes, step / sqrt(12), and wider where it is hardly known."""
+    return replace(noise, sigma_V=max(noise.sigma_V * noise.widening, step_V / float(np.sqrt(12))))

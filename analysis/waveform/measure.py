@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Hashable, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -108,12 +108,16 @@ def measure_pulse_captures(
     """Measure several pulse captures, each with its fixture, which is quicker than one by one; see `measure_pulse_capture`."""
     records: list[Record] = []
     steps: list[float | None] = []
+    pools: list[Hashable] = []
     for capture, _ in captures:
         outputs = [record for _, record in sorted(capture.outputs.items())]
         drive = [] if capture.drive is None else [capture.drive]
         records += drive + outputs
+        alike = _taken_alike(capture)
+        pools += [None if alike is None else ("drive", alike)] * len(drive)
+        pools += [None if alike is None else ("output", alike)] * len(outputs)
         steps += [None] * len(drive) + [capture.conditions.volts_per_code] * len(outputs)
-    channels = iter(measure_channels(records, volts_per_code=steps))
+    channels = iter(measure_channels(records, volts_per_code=steps, pools=pools))
     found = []
     for capture, fixture in captures:
         drive_channel = None if capture.drive is None else next(channels)
@@ -126,6 +130,16 @@ def measure_pulse_captures(
             )
         )
     return found
+
+
+def _taken_alike(capture: Capture) -> Hashable:
+    """What captures of one run have in common that makes their noise alike; `None` where the run is not known."""
+    known = capture.conditions
+    if known.run is None:
+        return None
+    return (
+        capture.name.rpartition("/")[0], known.run, known.averages, known.bandwidth_limit_Hz, known.input_ohm, known.load_ohm,
+    )  # fmt: skip
 
 
 def _measure_element(

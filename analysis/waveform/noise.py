@@ -9,12 +9,16 @@ from dataclasses import dataclass
 import numpy as np
 
 from darkedge.analysis.captures import FloatArray
+from darkedge.analysis.uncertainty import coverage_factor
 
 MAD_TO_SIGMA = 1.482602218505602
 """1 / Phi^-1(3/4): median absolute deviation of normal noise to its standard deviation."""
 
 ENOUGH_FLAT_SAMPLES = 30
 """Below this many flat samples the noise is known to worse than 13 %, 1 / sqrt(2 (n - 1)), and is called unknown."""
+
+ENOUGH_INDEPENDENT = 20.0
+"""Independent samples below which slow noise cannot be told from a tail or a drift."""
 
 LONGEST_LAG = 256
 """Lag in samples beyond which no correlation is looked for."""
@@ -27,6 +31,9 @@ MOST_DIFFERENCES = 4096
 
 STRETCHES = 16
 """Stretches, evenly over a long record, in which the differences are taken."""
+
+MOST_POOLED = 24
+"""Channels whose stretches at rest are looked at together for the correlation of their noise."""
 
 FEWEST_CODES, MOST_CODES = 8, 65536
 """Reach of a record, in its smallest steps, between which the smallest step is taken for a code."""
@@ -48,7 +55,12 @@ class Noise:
     @property
     def known(self) -> bool:
         """Whether the flat parts were long enough to tell."""
-        return self.n_flat >= ENOUGH_FLAT_SAMPLES
+        return self.n_flat >= ENOUGH_FLAT_SAMPLES and self.independent >= ENOUGH_INDEPENDENT
+
+    @property
+    def widening(self) -> float:
+        """By how much intervals are wider because the size of the noise is itself uncertain: Student's factor over the normal one."""
+        return coverage_factor(0.95, max(self.independent, 3.0)) / coverage_factor(0.95, math.inf)
 
     @property
     def independent(self) -> float:
@@ -161,7 +173,42 @@ def flat_noise(residuals_V: Sequence[FloatArray], *, fallback_V: float) -> Noise
     if not variance > 0:
         return Noise(sigma_V=0.0, correlation=np.ones(1), n_flat=n_flat)
     rho = np.divide(sums, np.maximum(counts, 1)) / (sums[0] / counts[0])
-    return Noise(sigma_V=float(np.sqrt(variance)), correlation=_cut(rho, counts), n_flat=n_flat)
+    found = Noise(sigma_V=float(np.sqrt(variance)), correlation=_cut(rho, counts), n_flat=n_flat)
+    if found.correlation.size == 1:
+        return found
+    # What the mean of each part took away is put back: it made neighbours look less alike than they are.
+    taken = min(found.inflation(n_flat // len(parts)) * len(parts) / n_flat, 0.5)
+    rho = (rho + taken) / (1.0 + taken)
+    return Noise(
+        sigma_V=found.sigma_V * math.sqrt(1.0 + taken - len(parts) / n_flat),
+        correlation=_cut(rho, counts),
+        n_flat=n_flat,
+    )
+
+
+def pooled(noises: Sequence[Noise], parts_V: Sequence[Sequence[FloatArray]]) -> list[Noise]:
+    """Noise of channels that were taken alike: the correlation from all of them together, the size from each.
+
+    Parameters
+    ----------
+    noises : sequence of Noise
+        As each channel told by itself.
+    parts_V : sequence
+        The stretches at rest of each channel.
+    """
+    scaled = [
+        part / noise.sigma_V
+        for noise, parts in zip(noises[:MOST_POOLED], parts_V, strict=False)
+        if noise.sigma_V > 0
+        for part in parts
+    ]
+    together = rest_noise(scaled, fallback_V=1.0)
+    return [
+        Noise(sigma_V=noise.sigma_V, correlation=together.correlation, n_flat=noise.n_flat)
+        if noise.sigma_V > 0 and noise.n_flat >= ENOUGH_FLAT_SAMPLES
+        else noise
+        for noise in noises
+    ]
 
 
 def rest_noise(parts_V: Sequence[FloatArray], *, fallback_V: float) -> Noise:

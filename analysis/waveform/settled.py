@@ -12,7 +12,7 @@ References: IEEE Std 181-2011 for levels and instants; Aitken (1935) for least s
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Hashable, Sequence
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -25,7 +25,7 @@ from darkedge.analysis.waveform.edges import TEN_NINETY, BoolArray, IntArray, Tr
 from darkedge.analysis.waveform.first_look import FirstLook
 from darkedge.analysis.waveform.least_squares import WhiteFits, fit_white_rows
 from darkedge.analysis.waveform.levels import StateLevels
-from darkedge.analysis.waveform.noise import Noise, rest_noise, u_quantised_V
+from darkedge.analysis.waveform.noise import ENOUGH_INDEPENDENT, Noise, pooled, rest_noise, u_quantised_V
 from darkedge.analysis.waveform.one_pole import (
     LN_S,
     LN_TAU,
@@ -56,9 +56,6 @@ DYING = 4.0
 
 PATCHY = 16.0
 """Power of one stretch at rest over that of another from which slow noise is called ringing or a tail."""
-
-LEAST_INDEPENDENT = 20.0
-"""Independent samples at rest from which slow noise is believed to be noise."""
 
 NEAR = 0.1
 """Change of a logarithm up to which the slope at the fit leads to the joint levels."""
@@ -257,8 +254,15 @@ class SettledChannel:
     transitions: Transitions
 
 
-def fit_settled(looks: Sequence[FirstLook], fractions: tuple[float, ...] = TEN_NINETY) -> list[SettledChannel | None]:
-    """Fit channels of even records together; `None` for one that does not settle or is not of the family."""
+def fit_settled(
+    looks: Sequence[FirstLook],
+    fractions: tuple[float, ...] = TEN_NINETY,
+    pools: Sequence[Hashable] | None = None,
+) -> list[SettledChannel | None]:
+    """Fit channels of even records together; `None` for one that does not settle or is not of the family.
+
+    Channels with the same entry in `pools` (and the same time step) were taken alike, and share the correlation of their noise.
+    """
     if not looks:
         return []
     cut = cut_edges(looks)
@@ -271,7 +275,9 @@ def fit_settled(looks: Sequence[FirstLook], fractions: tuple[float, ...] = TEN_N
     rows = np.flatnonzero(fit_for[cut.channel])
     renumbered = np.cumsum(fit_for) - 1
     job = _Job(
-        looks=[looks[k] for k in kept], cut=cut.select(rows, channel=renumbered[cut.channel[rows]].astype(np.intp))
+        looks=[looks[k] for k in kept],
+        cut=cut.select(rows, channel=renumbered[cut.channel[rows]].astype(np.intp)),
+        pools=[None if pools is None else pools[k] for k in kept],
     )
     for k, channel in zip(kept, job.channels(fractions), strict=True):
         found[int(k)] = channel
@@ -338,7 +344,7 @@ def _deviations(chi2: FloatArray, freedom: FloatArray) -> FloatArray:
 class _Job:
     """The joint fit of some channels, step by step."""
 
-    def __init__(self, *, looks: Sequence[FirstLook], cut: CutEdges) -> None:
+    def __init__(self, *, looks: Sequence[FirstLook], cut: CutEdges, pools: Sequence[Hashable]) -> None:
         self.looks, self.cut = looks, cut
         self.bins: BinnedEdges = bin_edges(cut)
         self.means = self.bins.fine_count >= MEAN_FROM
@@ -351,8 +357,9 @@ class _Job:
         self.coloured = np.empty(0, dtype=np.intp)
         self.place = np.full(cut.channel.size, -1)
         self.matrix = np.empty((0, 0, 0))
-        self.sigma_V, self.sigma = np.empty(0), np.empty(0)
-        self.dying = np.zeros(len(looks), dtype=np.bool_)
+        self.sigma_V, self.sigma, self.widening = np.empty(0), np.empty(0), np.empty(0)
+        self.rests: list[list[FloatArray]] = [[] for _ in looks]
+        self.pools = pools
 
     def channels(self, fractions: tuple[float, ...]) -> list[SettledChannel | None]:
         quarter = (self.cut.quarter - self.cut.quarter[:, 1:2]) / self.cut.unit[:, None]
@@ -361,10 +368,26 @@ class _Job:
         start = np.concatenate((shape, np.zeros((shape.shape[0], 1)), np.ones((shape.shape[0], 1))), axis=1)
         fits = self._fit_all(start)
         noises = [self._noise(k, fits.parameters) for k in range(len(self.looks))]
+        self.dying = np.array([_dies_down(rest, noise) for rest, noise in zip(self.rests, noises, strict=True)])
+        noises = self._pooled(noises)
         self._whiten(noises)
         if self.coloured.size:
             fits = _put(fits, self._fit(fits.parameters[self.coloured], self.coloured), self.coloured)
         return self._joined(self._rivals(fits), noises, fractions)
+
+    def _pooled(self, noises: list[Noise]) -> list[Noise]:
+        """Let channels that were taken alike share the correlation of their noise, where one of them shows any."""
+        alike: dict[Hashable, list[int]] = {}
+        for k, pool in enumerate(self.pools):
+            if pool is not None and not self.dying[k]:
+                alike.setdefault((pool, self.looks[k].record.dt_s), []).append(k)
+        found = list(noises)
+        for places in alike.values():
+            if len(places) > 1 and any(noises[k].correlation.size > 1 for k in places):
+                together = pooled([noises[k] for k in places], [self.rests[k] for k in places])
+                for k, noise in zip(places, together, strict=True):
+                    found[k] = noise
+        return found
 
     def _fit_all(self, start: FloatArray) -> WhiteFits:
         """Fit every edge; the shape of one with hardly a sample on it is a Gaussian edge of some width, or of none."""
@@ -384,6 +407,7 @@ class _Job:
         """Hold the noise of each channel: its size, and matrices that whiten the bins where it is not white."""
         codes = np.array([look.step_V for look in self.looks]) / np.sqrt(12)
         self.sigma_V = np.maximum(np.array([noise.sigma_V for noise in noises]), codes)
+        self.widening = np.array([noise.widening for noise in noises])[self.cut.channel]
         self.sigma = np.maximum(self.sigma_V[self.cut.channel] / self.cut.amplitude_V, FINEST_RATIO / 10)
         running = {k: whitener(noise.correlation) for k, noise in enumerate(noises) if noise.correlation.size > 1}
         rows = np.flatnonzero(np.isin(self.cut.channel, list(running)))
@@ -500,9 +524,8 @@ class _Job:
             left -= rest[-1].size
             if left < 64:
                 break
-        noise = rest_noise(rest, fallback_V=look.hiss_V)
-        self.dying[channel] = _dies_down(rest, noise)
-        return noise
+        self.rests[channel] = rest
+        return rest_noise(rest, fallback_V=look.hiss_V)
 
     def _course(self, row: int, parameters: FloatArray) -> tuple[float, float, float, float]:
         """Begin, time constant and front end of one edge in samples of its record, and its signed swing in volts."""
@@ -539,7 +562,7 @@ class _Job:
         good = np.ones(n, dtype=np.bool_)
         np.logical_and.at(good, cut.channel, np.stack([fit.good for fit, _ in rivals])[best, row])
         good &= agrees & self._fits_well(residual) & ~self.dying
-        slow = np.array([n.correlation.size > 1 and n.independent < LEAST_INDEPENDENT for n in noises])
+        slow = np.array([n.correlation.size > 1 and n.independent < ENOUGH_INDEPENDENT for n in noises])
         codes = np.array([look.step_V for look in self.looks])
         swing = joint[:, 1] - joint[:, 0]
         # Noise as slow as the plateaus are long may as well be a tail.
@@ -595,7 +618,7 @@ class _Job:
             gain = -inverse @ (derivative[:, :START] @ of_ends.transpose(0, 2, 1))
             moved[rows] = again.parameters
             given, by_volts = given.copy(), by_volts.copy()
-            given[rows] = inverse * (self.sigma[rows] ** 2)[:, None, None]
+            given[rows] = inverse * ((self.widening * self.sigma)[rows] ** 2)[:, None, None]
             by_volts[rows] = gain @ per_volt
         return FamilyMember(parameters=bounded(moved), covariance=given, by_levels=by_volts, weight=weight, shape=shape)
 
@@ -610,7 +633,7 @@ class _Job:
 
     def _parted(self, fits: WhiteFits) -> _Parted:
         """What a fit says of the levels of each edge, and of its shape once the levels are known."""
-        covariance = fits.inverse * (self.sigma**2)[:, None, None]
+        covariance = fits.inverse * ((self.widening * self.sigma) ** 2)[:, None, None]
         to_ends = np.array([[1.0, 0.0], [1.0, 1.0]])  # level before the edge, level after it
         ends = fits.parameters[:, START : SWING + 1] @ to_ends.T
         information = np.linalg.inv(to_ends @ covariance[:, START:, START:] @ to_ends.T + 1e-18 * np.eye(2))
