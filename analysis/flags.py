@@ -152,7 +152,7 @@ _ALL = (
     Flag(
         code="jittered_average",
         sentence="The average was taken under trigger jitter, which broadens the edge.",
-        mend="Trigger on the drive, not on the noisy output, or capture single shots.",
+        mend="Trigger on the drive, not on the noisy output, or capture single shots; or state trigger_jitter_s in the fixture file.",
     ),
     Flag(
         code="fixture_expired",

@@ -59,6 +59,8 @@ class Measurement:
     levels: str | None = None
     estimator: str | None = None
     n_pulses: int | None = None
+    trigger_s: float | None = field(default=None, compare=False)
+    """When the drive's first edge passed half of its way on the record's own time; no column: captures of a run are compared by it."""
 
     def __post_init__(self) -> None:
         unknown = self.quantities.keys() - set(ALL_QUANTITIES)

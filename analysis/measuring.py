@@ -13,6 +13,7 @@ from darkedge.analysis.dark.traces import TraceSummary, summarise_trace
 from darkedge.analysis.errors import DarkedgeError
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture
 from darkedge.analysis.measurement import Estimate, Measurement
+from darkedge.analysis.waveform.jitter import flag_jittered
 from darkedge.analysis.waveform.measure import measure_pulse_capture, measure_pulse_captures
 from darkedge.analysis.waveform.reference import TEN_FIFTY_NINETY, ReferenceLevels
 
@@ -182,7 +183,7 @@ def finish_measuring(
             rows[place] = item
     for (place, _), row in zip(still, _still_measurements([trace for _, trace in still], fixture_for), strict=True):
         rows[place] = row
-    return [_with_expiry(row, fixture_for(row.capture), today) for row in rows]
+    return flag_jittered([_with_expiry(row, fixture_for(row.capture), today) for row in rows])
 
 
 def _with_expiry(row: Measurement, fixture: Fixture, today: date | None) -> Measurement:

@@ -17,7 +17,7 @@ from darkedge.analysis.captures import (
 )
 from darkedge.analysis.fixture import UNKNOWN_FIXTURE, Fixture, Response
 from darkedge.analysis.measurement import Estimate, Measurement
-from darkedge.analysis.waveform.bench_out import Seen, Stage, without_bench
+from darkedge.analysis.waveform.bench_out import GAUSSIAN_SHARE, Seen, Stage, without_bench
 from darkedge.analysis.waveform.channel import Channel, measure_channels
 from darkedge.analysis.waveform.crossings import ENOUGH_TO_FIT
 from darkedge.analysis.waveform.edges import IntArray, Transitions
@@ -53,6 +53,9 @@ LOADING_RATIO = 0.01
 
 LIMIT_MARGIN = 10.0
 """A bandwidth limit's own rise time, 0.35 / bandwidth, is to be this many times shorter than the edge."""
+
+JITTER_KNOWN_TO = 0.1
+"""Relative standard uncertainty of a stated trigger jitter: that of the scatter of some fifty triggers."""
 
 GAUSSIAN_TEN_NINETY = 2.5631031310892007
 """10 to 90 % time of a Gaussian edge over its standard deviation."""
@@ -174,6 +177,7 @@ def _measure_element(
     return Measurement(
         capture=capture.name, element=element, conditions=conditions, quantities=quantities, flags=tuple(flags),
         levels=reference.words, estimator=job.estimator(), n_pulses=job.n_pulses(),
+        trigger_s=None if drive is None or drive.transitions.rising.size == 0 else float(drive.transitions.time_s[0, 1]),
     )  # fmt: skip
 
 
@@ -331,9 +335,9 @@ class _Job:
         A switching transistor is no stage in a row: its edges stay as they are.
         """
         response, known = self.fixture.response, self.conditions
-        if response is None or light_high is None or known.device_kind in _SWITCHES:
-            return {}
-        if not response.holds_at(known.emitter_current_A):
+        if response is not None and (light_high is None or not response.holds_at(known.emitter_current_A)):
+            response = None
+        if known.device_kind in _SWITCHES or (response is None and self._jitter_s() == 0.0):
             return {}
         found: dict[str, Estimate] = {}
         for name, rising in (("rise_time_s", True), ("fall_time_s", False)):
@@ -350,8 +354,15 @@ class _Job:
             found |= {name: alone if self.keep_parts else replace(alone, parts=None), f"seen_{name}": seen[name]}
         return found
 
-    def _bench_stage(self, response: Response, *, on: bool) -> Stage:
-        """One edge of the bench; averaging under trigger jitter adds a Gaussian stage to it."""
+    def _jitter_s(self) -> float:
+        """Trigger jitter that averaging has put into the edges."""
+        return self.fixture.trigger_jitter_s if (self.conditions.averages or 1) > 1 else 0.0
+
+    def _bench_stage(self, response: Response | None, *, on: bool) -> Stage:
+        """One edge of the bench; averaging under trigger jitter adds a Gaussian stage to it, or is all that is known of it."""
+        jitter = GAUSSIAN_TEN_NINETY * self._jitter_s()
+        if response is None:
+            return Stage(duration_s=jitter, u_duration_s=JITTER_KNOWN_TO * jitter, share=GAUSSIAN_SHARE)
         time, u_time, share, u_share = (
             (response.rise_time_s, response.u_rise_time_s, response.rise_share, response.u_rise_share)
             if on
