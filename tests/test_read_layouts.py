@@ -212,6 +212,10 @@ class TestHeadings:
         text = "Vertical Units,CH1:V CH2:V\nSource,CH1,CH2\nSecond,Value,Value\n"
         assert_even(read(tmp_path, text + columns(lambda t, d, o: f"{t:.9f},{d:.6f},{o:.6f}")), drive=True)
 
+    def test_a_percent_sign_within_a_heading_begins_no_comment(self, tmp_path: Path) -> None:
+        text = "Time (s),Humidity (%),CH1 (V)\n" + columns(lambda t, d, o: f"{t:.12g},{40 + d:.6g},{o:.6g}")
+        assert_even(read(tmp_path, text))
+
     def test_a_sample_number_beside_the_time_is_no_channel(self, tmp_path: Path) -> None:
         text = ",Time,CH1\n" + "".join(f"{i},{t:.12g},{o:.6g}\n" for i, (t, _, o) in enumerate(ROWS))
         assert_even(read(tmp_path, text))

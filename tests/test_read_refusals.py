@@ -7,6 +7,7 @@ import re
 import zipfile
 from collections.abc import Callable
 from pathlib import Path
+from time import process_time
 
 import numpy as np
 import pytest
@@ -129,6 +130,13 @@ class TestDamagedRows:
         lines[57] = f"{TIME_S[56]:.6g},{cell}"
         refuse(tmp_path, "\n".join(lines) + "\n", "line 58", "infinite", cell, "wider range")
 
+    @pytest.mark.parametrize("cell", ["9.9E+37", "-9.91e37", "1e308"])
+    def test_the_number_that_instruments_write_for_infinity(self, tmp_path: Path, cell: str) -> None:
+        """SCPI-1999, volume 1, 7.2.1.4 and 7.2.1.5: 9.9E37 for infinity, 9.91E37 for no number."""
+        lines = good_lines()
+        lines[57] = f"{TIME_S[56]:.6g},{cell}"
+        refuse(tmp_path, "\n".join(lines) + "\n", "line 58", "infinite", cell, "wider range")
+
     def test_a_sample_without_its_time(self, tmp_path: Path) -> None:
         text = "\n".join(good_lines()) + "\n,0.25\n"
         refuse(tmp_path, text, "line 202, column 2 (out)", "a sample without its time")
@@ -167,6 +175,25 @@ class TestTime:
     def test_sample_numbers_without_an_interval(self, tmp_path: Path) -> None:
         text = "Time - Plot 0\tAmplitude - Plot 0\t\n" + "".join(f"{i}\t{v:.6f}\t\n" for i, v in enumerate(VOLT))
         refuse(tmp_path, text, "line 1, column 1 (Time - Plot 0)", "samples are counted", "found sample numbers")
+
+    @pytest.mark.parametrize(
+        ("start", "increment"), [("1e999", "1e-9"), ("0", "1e999"), ("0", "1e308"), ("0", "-1e-9")]
+    )
+    def test_a_start_or_an_increment_that_no_record_can_have(self, tmp_path: Path, start: str, increment: str) -> None:
+        text = f"X,CH1,Start,Increment,\nSequence,Volt,{start},{increment}\n"
+        text += "".join(f"{i},{v:.6f},\n" for i, v in enumerate(VOLT))
+        refuse(tmp_path, text, "line 2, column 1 (X)", "nothing says how long one takes")
+
+    @pytest.mark.parametrize("period", ["1e999", "1e308", "1e-320"])
+    def test_a_sampling_period_that_no_record_can_have(self, tmp_path: Path, period: str) -> None:
+        text = f"Sampling Period,{period},\nWaveform Data,\n" + "".join(f"{v:.6f},\n" for v in VOLT)
+        refuse(tmp_path, text, "line 3", "nothing says when the samples were taken")
+
+    def test_a_start_so_far_from_zero_that_the_samples_cannot_be_told_apart(self, tmp_path: Path) -> None:
+        text = "X,CH1,Start,Increment,\nSequence,Volt,1e9,1e-9\n" + "".join(
+            f"{i},{v:.6f},\n" for i, v in enumerate(VOLT)
+        )
+        refuse(tmp_path, text, "line 2", "cannot be told apart so far from 0 s", "1e+09 s", "1e-09 s")
 
     def test_two_intervals_that_differ(self, tmp_path: Path) -> None:
         text = "Sample Interval,1e-9\nSample Rate,2e9\n\nn,V\n" + "".join(f"{i},{v:.6f}\n" for i, v in enumerate(VOLT))
@@ -305,6 +332,40 @@ class TestDecimalComma:
     def test_one_column_with_a_decimal_comma(self, tmp_path: Path) -> None:
         rows = [f"{v + 1:.6f}".replace(".", ",") for v in VOLT]
         refuse(tmp_path, "Sample interval = 1e-9\n" + "\n".join(rows) + "\n", "comma may separate the values")
+
+
+class TestLongLines:
+    """A line longer than any that a program writes costs no more time than its length, and is not quoted whole."""
+
+    @pytest.mark.parametrize("piece", ["\t", " ", '"', "in ", "_a", "/", "sampl", ": "])
+    def test_above_the_numbers_it_states_nothing(self, tmp_path: Path, piece: str) -> None:
+        begin = process_time()
+        (tmp_path / "trace.csv").write_text("\n".join([piece * 70_000, *good_lines()]) + "\n", encoding="utf-8")
+        assert read_capture(tmp_path / "trace.csv").outputs[1].signal_V.size == N
+        assert process_time() - begin < 3
+
+    @pytest.mark.parametrize("piece", ["1,", "1.5e-3,", "x", '"', "0;"])
+    def test_below_the_numbers_it_is_refused(self, tmp_path: Path, piece: str) -> None:
+        begin = process_time()
+        refuse(tmp_path, "\n".join([*good_lines(), piece * 70_000]) + "\n", "line 202", "another number of values")
+        assert process_time() - begin < 3
+
+    def test_a_quote_that_is_never_closed(self, tmp_path: Path) -> None:
+        refuse(tmp_path, "\n".join([*good_lines(), '"' + "1" * 200_000]) + "\n", "line 202", "another number of values")
+
+    @pytest.mark.parametrize(
+        "lines",
+        [
+            ["# format = darkedge-capture " + "x" * 50_000, "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"# {'x' * 50_000} = 1", "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"# kind = {'x' * 50_000}", "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"# element = {'9' * 5_000}", "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"time_s,output{'9' * 5_000}_V"],
+            [f"time (s),{'out in ' * 500}"],
+        ],
+    )
+    def test_a_refusal_quotes_only_its_beginning(self, tmp_path: Path, lines: list[str]) -> None:
+        assert len(refuse(tmp_path, "\n".join([*lines, *good_rows()]) + "\n", "...")) < 1500
 
 
 class TestChannels:

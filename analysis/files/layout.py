@@ -6,13 +6,14 @@ numbers begin where such lines begin, and what stands above or beside them is he
 
 from __future__ import annotations
 
+import math
 import re
 from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 from darkedge.analysis.errors import CaptureError
-from darkedge.analysis.files.numbers import BLANKS, Body, Writing, shown
+from darkedge.analysis.files.numbers import BLANKS, Body, Writing, is_step, shown
 from darkedge.analysis.files.units_written import Dimension, WrittenUnit, read_unit, split_unit
 
 FEWEST_ROWS = 8
@@ -25,7 +26,9 @@ _WRITINGS = tuple(
     Writing(separator=separator, decimal=decimal) for separator in ("\t", ";", ",", BLANKS) for decimal in (".", ",")
 )
 _DOUBTFUL = Writing(separator=",", decimal=",")
-_COMMENT = re.compile(r"\s*(?:#|%|//)\s?")
+_COMMENT = re.compile(r"\A\s*(?:#|%|//)\s?")
+_LONGEST_HEADING = 4000
+"""Characters of a line of headings or settings; what is longer states nothing that could be understood."""
 _INDEX_WORDS = {"sequence", "index", "sample", "samples", "point", "points", "no", "no.", "nr", "nr.", "n", "#"}
 _INCREMENT_WORDS = ("incr", "step", "interval", "delta", "period")
 
@@ -174,8 +177,9 @@ def _patterns(rows: Sequence[str], writing: Writing) -> tuple[Counter[tuple[int,
 def _numeric(row: str, writing: Writing) -> tuple[tuple[int, ...], bool]:
     """The cells that are numbers, and whether the others are blank."""
     cells = writing.cells(row)
-    columns = tuple(c for c, cell in enumerate(cells) if writing.is_number(cell))
-    return columns, all(c in columns or writing.is_missing(cell) for c, cell in enumerate(cells))
+    numbers = [writing.is_number(cell) for cell in cells]
+    columns = tuple(c for c, number in enumerate(numbers) if number)
+    return columns, all(number or writing.is_missing(cell) for number, cell in zip(numbers, cells, strict=True))
 
 
 def _refuse_varying_commas(rows: Sequence[str], writing: Writing, text: bytes) -> None:
@@ -285,6 +289,8 @@ def _settings(
     lines: Sequence[str], first: int, writing: Writing, columns: tuple[int, ...]
 ) -> Iterator[tuple[int, tuple[str, ...]]]:
     for number, line in enumerate(lines[:first], start=1):
+        if len(line) > _LONGEST_HEADING:
+            continue
         bare = _COMMENT.sub("", line, count=1)
         split = re.split(r"\s*[:=]\s+|\s*=\s*|\t|,", bare) if _COMMENT.match(line) else writing.cells(bare)
         if len(split) == 1:
@@ -295,6 +301,8 @@ def _settings(
     if columns[0] == 0 and len(columns) == columns[-1] + 1:
         return
     for number, line in enumerate(lines[first:], start=first + 1):
+        if len(line) > _LONGEST_HEADING:
+            continue
         cells = tuple(cell for c, cell in enumerate(writing.cells(line)) if cell and c not in columns)
         if cells:
             yield number, cells
@@ -351,6 +359,8 @@ class _Headings:
 
 def _heading_cells(line: str, writing: Writing, columns: tuple[int, ...]) -> list[str] | None:
     """The cells of a heading, each at the place of its column, where the line can be split so."""
+    if len(line) > _LONGEST_HEADING:
+        return None
     bare = _COMMENT.sub("", line, count=1).strip("\n")
     if writing.separator != BLANKS and writing.separator in bare:
         return [cell.strip('"') for cell in writing.cells(bare)]
@@ -396,13 +406,13 @@ def _start_and_increment(
 ) -> tuple[float | None, float | None]:
     """Two numbers behind the units: start and increment, in the order their names say, else in this one."""
     numbers = {c: float(cell) for c, cell in enumerate(units) if c > columns[-1] and _is_plain_number(cell)}
-    if len(numbers) != 2:
+    if len(numbers) != 2 or not all(map(math.isfinite, numbers.values())):
         return None, None
     first, second = numbers
     over_first = _at(names, first).casefold() if names is not None else ""
     if any(word in over_first for word in _INCREMENT_WORDS):
         first, second = second, first
-    return (numbers[first], numbers[second]) if numbers[second] > 0 else (None, None)
+    return (numbers[first], numbers[second]) if is_step(numbers[second]) else (None, None)
 
 
 def _is_plain_number(cell: str) -> bool:

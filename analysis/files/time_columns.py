@@ -248,6 +248,11 @@ def _counted_times(table: NumberTable, place: int | None) -> Times:
             mend="export with time, or add a line such as: # sample interval = 2e-9 s",
         )  # fmt: skip
     start_s = layout.start_s or 0.0
+    if float(np.spacing(abs(start_s))) > EVEN_RATIO * steps[0]:
+        raise CaptureError(
+            "the samples cannot be told apart so far from 0 s", where=table.heading,
+            found=f"a start at {start_s:g} s, steps of {steps[0]:g} s", wanted="a start and a step of one record",
+        )  # fmt: skip
     if place is None:
         return Times(place=None, axis=TimeAxis(t0_s=start_s, dt_s=steps[0]), first=0, count=len(table.values))
     first, count = finite_part(table, table.values[:, place], place)
