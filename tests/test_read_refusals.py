@@ -163,6 +163,15 @@ class TestTime:
         text = "\n".join([*good_lines(), *good_rows()]) + "\n"
         refuse(tmp_path, text, "line 202", "the time goes back", "Export one acquisition to a file")
 
+    @pytest.mark.parametrize(
+        "heading", ["", "#Device: invented\n\nTime (s),Channel 1 (V)\n", "x-axis,3\nsecond,Volt\n"]
+    )
+    def test_another_capture_above_in_another_layout(self, tmp_path: Path, heading: str) -> None:
+        """Neither of the two is taken, and the first is no heading of the second."""
+        other = "in s;C1 in V\n" + "".join(f"{t:.6g};{v:.6f}\n" for t, v in zip(TIME_S, VOLT, strict=True))
+        text = other + heading + "\n".join(good_rows()) + "\n"
+        refuse(tmp_path, text, "line 9", "rows of numbers in two layouts", "wanted one capture", "Split the file")
+
     def test_a_row_twice(self, tmp_path: Path) -> None:
         lines = good_lines()
         lines.insert(50, lines[50])

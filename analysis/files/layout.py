@@ -27,6 +27,7 @@ _WRITINGS = tuple(
 )
 _DOUBTFUL = Writing(separator=",", decimal=",")
 _COMMENT = re.compile(r"\A\s*(?:#|%|//)\s?")
+_ONLY_NUMBERS = re.compile(r"[\d\s.,;+\-eE\"]+", re.ASCII)
 _LONGEST_HEADING = 4000
 """Characters of a line of headings or settings; what is longer states nothing that could be understood."""
 _INDEX_WORDS = {"sequence", "index", "sample", "samples", "point", "points", "no", "no.", "nr", "nr.", "n", "#"}
@@ -83,6 +84,7 @@ def find_layout(text: bytes) -> Layout:
         first = _first_row(head, writing, columns, complete=True)
     if first is None:
         raise _too_few(tail, text, columns)
+    _refuse_other_numbers_above(head[:first])
     first_cells = [writing.cells(line) for line in _filled(head[first:], writing, _SAMPLE_ROWS)]
     columns = _with_shorter_channels(columns, first_cells, writing)
     n_cells = max(n_cells, columns[-1] + 1)
@@ -264,6 +266,20 @@ def _refuse_rows_above(
             "text among the numbers", where=f"line {text + 1}", found=shown(lines[text]), wanted="a row of numbers",
             mend="remove the line, or export again",
         )  # fmt: skip
+
+
+def _refuse_other_numbers_above(above: Sequence[str]) -> None:
+    """Rows of numbers in another layout above these are another capture, no heading."""
+    run = 0
+    for number, line in enumerate(above, start=1):
+        if not line.strip(" \t,;"):
+            continue
+        run = run + 1 if _ONLY_NUMBERS.fullmatch(line) and re.search(r"\d", line) else 0
+        if run >= FEWEST_ROWS:
+            raise CaptureError(
+                "rows of numbers in two layouts", where=f"line {number}", found=shown(line),
+                wanted="one capture in a file", mend="split the file where the second begins",
+            )  # fmt: skip
 
 
 def _filled(lines: Sequence[str], writing: Writing, count: int) -> list[str]:
