@@ -105,7 +105,13 @@ def pulse(rng: np.random.Generator) -> Signals:
     settled = late + 8 * tau + 2
     flat = (place < -3) | ((place > settled) & (place < width - 3)) | (place > width + settled)
     flat[:2] = flat[-2:] = False
-    return Signals(dt_s=dt, time_s=dt * place, drive_V=np.round(drive, 4), output_V=np.round(output, 6), flat=flat)
+    return Signals(
+        dt_s=dt,
+        time_s=np.asarray(dt * place, dtype=np.float64),
+        drive_V=np.round(drive, 4),
+        output_V=np.round(output, 6),
+        flat=flat,
+    )
 
 
 def still(rng: np.random.Generator) -> Signals:
@@ -113,7 +119,13 @@ def still(rng: np.random.Generator) -> Signals:
     n = int(rng.integers(60, 401))
     output = float(rng.choice([2e-3, 5e-3, 0.05])) + rng.normal(0, 1e-3, n)
     flat = np.ones(n, dtype=np.bool_)
-    return Signals(dt_s=1e-3, time_s=1e-3 * np.arange(n), drive_V=np.zeros(n), output_V=np.round(output, 6), flat=flat)
+    return Signals(
+        dt_s=1e-3,
+        time_s=np.asarray(1e-3 * np.arange(n), dtype=np.float64),
+        drive_V=np.zeros(n),
+        output_V=np.round(output, 6),
+        flat=flat,
+    )
 
 
 def threes(value: float) -> str:

@@ -172,6 +172,10 @@ class TestTime:
         text = other + heading + "\n".join(good_rows()) + "\n"
         refuse(tmp_path, text, "line 9", "rows of numbers in two layouts", "wanted one capture", "Split the file")
 
+    def test_steps_shorter_than_any_record_has(self, tmp_path: Path) -> None:
+        rows = "".join(f"{1e-300 * i!r},{v:.6f}\n" for i, v in enumerate(VOLT))
+        refuse(tmp_path, f"time (s),out (V)\n{rows}", "line 3, column 1 (time)", "shorter than any record's", "unit of")
+
     def test_a_row_twice(self, tmp_path: Path) -> None:
         lines = good_lines()
         lines.insert(50, lines[50])

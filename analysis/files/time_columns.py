@@ -21,6 +21,11 @@ LONGEST_BARE_STEP_S = 1e-4
 
 _SAME_STEP_RATIO = 0.01
 
+_MENDS = (
+    ("still", "export the times with more digits, or add a line such as: # sample interval = 2e-9 s"),
+    ("shorter", "check the unit of the time"),
+)
+
 _TIME_NAMES = re.compile(r"(?:time|t|tiempo|zeit|temps|tempo|tid|x|x-axis)[ _]?\d*\b", re.IGNORECASE)
 _OTHER_NAMES = re.compile(
     r"\b(?:freq|hertz|volt|bias|curr|capac|wavel|temp(?:erat|\b)|dist|posit|angle|cycle|phase|power|leak|dark|load)"
@@ -220,17 +225,12 @@ def _axis(
     try:
         return time_axis(stamps, quanta_s=quanta, increments_s=increments)
     except TimeAxisError as fault:
-        stands = "still" in fault.what
         raise CaptureError(
             fault.what,
             where=f"{table.line(first + fault.row)}, {table.called(place)}",
             found=fault.found,
             wanted="times that rise from row to row",
-            mend=(
-                "export the times with more digits, or add a line such as: # sample interval = 2e-9 s"
-                if stands
-                else "export one acquisition to a file"
-            ),
+            mend=next((mend for word, mend in _MENDS if word in fault.what), "export one acquisition to a file"),
         ) from fault
 
 
