@@ -118,6 +118,18 @@ class TestDamagedRows:
         (tmp_path / "whole.csv").write_text("\n".join(good_lines()), encoding="utf-8")
         assert read_capture(tmp_path / "whole.csv").outputs[1].signal_V.size == N
 
+    @pytest.mark.parametrize("last", ["9.9e-08,-0.", "9.9e-08,3.5", "9.9e-08,3.96531e-1"])
+    def test_a_last_number_of_which_nothing_says_that_it_is_whole_is_left_out(self, tmp_path: Path, last: str) -> None:
+        """Numbers as short as they can be have no common form to hold it against: `-0.0796` may lack its end."""
+        rows = good_rows(lambda t, v: f"{t:.6g},{v:.3g}")[:-1]
+        path = tmp_path / "trace.csv"
+        path.write_text("\n".join(["time (s),out (V)", *rows, last]), encoding="utf-8")
+        capture = read_capture(path)
+        assert capture.outputs[1].signal_V.size == N - 1
+        assert "left out: line 201, whose number may have lost digits" in capture.read_as[-1]
+        path.write_text("\n".join(["time (s),out (V)", *rows, last]) + "\n", encoding="utf-8")
+        assert read_capture(path).outputs[1].signal_V.size == N
+
     @pytest.mark.parametrize("cell", ["", "NaN", "nan", "-1.#IND"])
     def test_a_sample_missing_among_the_others(self, tmp_path: Path, cell: str) -> None:
         lines = good_lines()
