@@ -159,6 +159,13 @@ class TestDamagedRows:
     def test_two_rows(self, tmp_path: Path) -> None:
         refuse(tmp_path, "TIME,CH1\n0,0.5\n1e-9,0.6\n", "line 3", "too few rows", "wanted 8 rows or more")
 
+    @pytest.mark.parametrize("end", [",", " mV", "mV"])
+    def test_a_column_of_numbers_with_something_behind_them(self, tmp_path: Path, end: str) -> None:
+        """Left aside as text, the output would be gone, and the drive would be taken for it."""
+        rows = good_rows(lambda t, v: f"{t * 1e6:.6f};{3 * (t > 0):.3f};{v:.6f}{end}".replace(".", ","))
+        text = "Zeit [µs];A [V];B [V]\n" + "\n".join(rows) + "\n"
+        refuse(tmp_path, text, "line 201, column 3", "numbers that cannot be read", "decimal comma and nothing else")
+
     def test_two_decimal_marks(self, tmp_path: Path) -> None:
         rows = good_rows(lambda t, v: f"{t:.9f};{v:.6f}".replace(".", ","))
         rows[90] = rows[90].replace(",", ".")

@@ -28,6 +28,9 @@ _WRITINGS = tuple(
 _DOUBTFUL = Writing(separator=",", decimal=",")
 _COMMENT = re.compile(r"\A\s*(?:#|%|//)\s?")
 _ONLY_NUMBERS = re.compile(r"[\d\s.,;+\-eE\"]+", re.ASCII)
+_NEARLY_A_NUMBER = re.compile(r"[+-]?\d[\d.,]*(?:[eE][+-]?\d+)?[.,]?\s?(?P<unit>[^\W\d]{0,8})")
+_DATE = re.compile(r"\d{1,4}\.\d{1,2}\.\d{0,4}")
+_MARKS = {".": "point", ",": "comma"}
 _LONGEST_HEADING = 4000
 """Characters of a line of headings or settings; what is longer states nothing that could be understood."""
 _INDEX_WORDS = {"sequence", "index", "sample", "samples", "point", "points", "no", "no.", "nr", "nr.", "n", "#"}
@@ -159,6 +162,7 @@ def _find_writing(rows: Sequence[str], text: bytes) -> tuple[Writing, tuple[int,
     _, writing, columns = best
     if writing.separator == "," and writing.decimal == "." and not quoted:
         _refuse_varying_commas(rows, writing, text)
+    _refuse_other_writing(rows, writing, text)
     n_cells = Counter(len(writing.cells(row)) for row in rows if _numeric(row, writing)[0] == columns)
     return writing, columns, n_cells.most_common(1)[0][0]
 
@@ -190,6 +194,26 @@ def _refuse_varying_commas(rows: Sequence[str], writing: Writing, text: bytes) -
     odd = len(rows) - counts.most_common(1)[0][1]
     if odd >= max(2, len(rows) // 4) and not any("." in row for row in rows):
         raise _undecided_comma(f"line {_last_line(text)}", rows[-1])
+
+
+def _refuse_other_writing(rows: Sequence[str], writing: Writing, text: bytes) -> None:
+    """A column of numbers in another writing, such as `0,5,` or `0.5 V`, is no text that may be left aside."""
+    cells = [writing.cells(row) for row in rows]
+    for column in range(min(map(len, cells))):
+        if all(_nearly_a_number(row[column], writing) for row in cells):
+            raise CaptureError(
+                "a column of numbers that cannot be read", where=f"line {_last_line(text)}, column {column + 1}",
+                found=shown(cells[-1][column]), wanted=f"numbers with a decimal {_MARKS[writing.decimal]} and nothing else",
+                mend="export again, with the unit in the heading",
+            )  # fmt: skip
+
+
+def _nearly_a_number(cell: str, writing: Writing) -> bool:
+    """Whether a cell that is no number was meant as one; a date was not."""
+    match = _NEARLY_A_NUMBER.fullmatch(cell)
+    if match is None or writing.is_number(cell) or _DATE.fullmatch(cell):
+        return False
+    return not match["unit"] or read_unit(match["unit"]) is not None
 
 
 def _refuse_doubtful_commas(layout: Layout, *, named: bool) -> None:
