@@ -134,6 +134,8 @@ class TestRefusing:
             ("# bias_V = 12", "# bias_V = nan", "bias_V is not a number; found 'nan'"),
             ("# bias_V = 12", "# bias_V 12", "line 7: not a condition; found '# bias_V 12'; wanted # name = value"),
             ("# bias_V = 12", "# bias_V = 12\n# bias_V = 12", "line 8: bias_V is there twice; found also line 7"),
+            ("# bias_V = 12", "# bias_V = 1e308", "line 7, bias_V: bias_V is beyond what any bench has; found '1e308'; wanted zero, or"),
+            ("1 kohm", "1e-320", "load_ohm is beyond what any bench has; found '1e-320'; wanted zero, or a magnitude from 1e-30 to 1e+30"),
             ("1 kohm", "0", "load_ohm is not positive; found '0'"),
             ("= pulse", "= pulses", "kind is not one of its words; found 'pulses'; wanted pulse, dark, offset, reference"),
             ("= photodiode\n# output", "= diode\n# output", "device_kind is not one of its words; found 'diode'; wanted photodiode, pin"),

@@ -212,6 +212,15 @@ class TestHeadings:
         text = "Vertical Units,CH1:V CH2:V\nSource,CH1,CH2\nSecond,Value,Value\n"
         assert_even(read(tmp_path, text + columns(lambda t, d, o: f"{t:.9f},{d:.6f},{o:.6f}")), drive=True)
 
+    @pytest.mark.parametrize("cell", ["03.03.2026", "09:14:02", "ok", "x7", "2026-03-03"])
+    def test_a_column_of_text_is_left_aside(self, tmp_path: Path, cell: str) -> None:
+        text = "Time (s),note,CH1 (V)\n" + columns(lambda t, _d, o: f"{t:.12g},{cell},{o:.6g}")
+        assert_even(read(tmp_path, text))
+
+    def test_a_percent_sign_within_a_heading_begins_no_comment(self, tmp_path: Path) -> None:
+        text = "Time (s),Humidity (%),CH1 (V)\n" + columns(lambda t, d, o: f"{t:.12g},{40 + d:.6g},{o:.6g}")
+        assert_even(read(tmp_path, text))
+
     def test_a_sample_number_beside_the_time_is_no_channel(self, tmp_path: Path) -> None:
         text = ",Time,CH1\n" + "".join(f"{i},{t:.12g},{o:.6g}\n" for i, (t, _, o) in enumerate(ROWS))
         assert_even(read(tmp_path, text))

@@ -7,6 +7,7 @@ import re
 import zipfile
 from collections.abc import Callable
 from pathlib import Path
+from time import process_time
 
 import numpy as np
 import pytest
@@ -117,6 +118,18 @@ class TestDamagedRows:
         (tmp_path / "whole.csv").write_text("\n".join(good_lines()), encoding="utf-8")
         assert read_capture(tmp_path / "whole.csv").outputs[1].signal_V.size == N
 
+    @pytest.mark.parametrize("last", ["9.9e-08,-0.", "9.9e-08,3.5", "9.9e-08,3.96531e-1"])
+    def test_a_last_number_of_which_nothing_says_that_it_is_whole_is_left_out(self, tmp_path: Path, last: str) -> None:
+        """Numbers as short as they can be have no common form to hold it against: `-0.0796` may lack its end."""
+        rows = good_rows(lambda t, v: f"{t:.6g},{v:.3g}")[:-1]
+        path = tmp_path / "trace.csv"
+        path.write_text("\n".join(["time (s),out (V)", *rows, last]), encoding="utf-8")
+        capture = read_capture(path)
+        assert capture.outputs[1].signal_V.size == N - 1
+        assert "left out: line 201, whose number may have lost digits" in capture.read_as[-1]
+        path.write_text("\n".join(["time (s),out (V)", *rows, last]) + "\n", encoding="utf-8")
+        assert read_capture(path).outputs[1].signal_V.size == N
+
     @pytest.mark.parametrize("cell", ["", "NaN", "nan", "-1.#IND"])
     def test_a_sample_missing_among_the_others(self, tmp_path: Path, cell: str) -> None:
         lines = good_lines()
@@ -125,6 +138,13 @@ class TestDamagedRows:
 
     @pytest.mark.parametrize("cell", ["inf", "-Infinity", "1e999", "1.#INF"])
     def test_an_infinite_value(self, tmp_path: Path, cell: str) -> None:
+        lines = good_lines()
+        lines[57] = f"{TIME_S[56]:.6g},{cell}"
+        refuse(tmp_path, "\n".join(lines) + "\n", "line 58", "infinite", cell, "wider range")
+
+    @pytest.mark.parametrize("cell", ["9.9E+37", "-9.91e37", "1e308"])
+    def test_the_number_that_instruments_write_for_infinity(self, tmp_path: Path, cell: str) -> None:
+        """SCPI-1999, volume 1, 7.2.1.4 and 7.2.1.5: 9.9E37 for infinity, 9.91E37 for no number."""
         lines = good_lines()
         lines[57] = f"{TIME_S[56]:.6g},{cell}"
         refuse(tmp_path, "\n".join(lines) + "\n", "line 58", "infinite", cell, "wider range")
@@ -138,6 +158,13 @@ class TestDamagedRows:
 
     def test_two_rows(self, tmp_path: Path) -> None:
         refuse(tmp_path, "TIME,CH1\n0,0.5\n1e-9,0.6\n", "line 3", "too few rows", "wanted 8 rows or more")
+
+    @pytest.mark.parametrize("end", [",", " mV", "mV"])
+    def test_a_column_of_numbers_with_something_behind_them(self, tmp_path: Path, end: str) -> None:
+        """Left aside as text, the output would be gone, and the drive would be taken for it."""
+        rows = good_rows(lambda t, v: f"{t * 1e6:.6f};{3 * (t > 0):.3f};{v:.6f}{end}".replace(".", ","))
+        text = "Zeit [µs];A [V];B [V]\n" + "\n".join(rows) + "\n"
+        refuse(tmp_path, text, "line 201, column 3", "numbers that cannot be read", "decimal comma and nothing else")
 
     def test_two_decimal_marks(self, tmp_path: Path) -> None:
         rows = good_rows(lambda t, v: f"{t:.9f};{v:.6f}".replace(".", ","))
@@ -155,6 +182,19 @@ class TestTime:
         text = "\n".join([*good_lines(), *good_rows()]) + "\n"
         refuse(tmp_path, text, "line 202", "the time goes back", "Export one acquisition to a file")
 
+    @pytest.mark.parametrize(
+        "heading", ["", "#Device: invented\n\nTime (s),Channel 1 (V)\n", "x-axis,3\nsecond,Volt\n"]
+    )
+    def test_another_capture_above_in_another_layout(self, tmp_path: Path, heading: str) -> None:
+        """Neither of the two is taken, and the first is no heading of the second."""
+        other = "in s;C1 in V\n" + "".join(f"{t:.6g};{v:.6f}\n" for t, v in zip(TIME_S, VOLT, strict=True))
+        text = other + heading + "\n".join(good_rows()) + "\n"
+        refuse(tmp_path, text, "line 9", "rows of numbers in two layouts", "wanted one capture", "Split the file")
+
+    def test_steps_shorter_than_any_record_has(self, tmp_path: Path) -> None:
+        rows = "".join(f"{1e-300 * i!r},{v:.6f}\n" for i, v in enumerate(VOLT))
+        refuse(tmp_path, f"time (s),out (V)\n{rows}", "line 3, column 1 (time)", "shorter than any record's", "unit of")
+
     def test_a_row_twice(self, tmp_path: Path) -> None:
         lines = good_lines()
         lines.insert(50, lines[50])
@@ -167,6 +207,25 @@ class TestTime:
     def test_sample_numbers_without_an_interval(self, tmp_path: Path) -> None:
         text = "Time - Plot 0\tAmplitude - Plot 0\t\n" + "".join(f"{i}\t{v:.6f}\t\n" for i, v in enumerate(VOLT))
         refuse(tmp_path, text, "line 1, column 1 (Time - Plot 0)", "samples are counted", "found sample numbers")
+
+    @pytest.mark.parametrize(
+        ("start", "increment"), [("1e999", "1e-9"), ("0", "1e999"), ("0", "1e308"), ("0", "-1e-9")]
+    )
+    def test_a_start_or_an_increment_that_no_record_can_have(self, tmp_path: Path, start: str, increment: str) -> None:
+        text = f"X,CH1,Start,Increment,\nSequence,Volt,{start},{increment}\n"
+        text += "".join(f"{i},{v:.6f},\n" for i, v in enumerate(VOLT))
+        refuse(tmp_path, text, "line 2, column 1 (X)", "nothing says how long one takes")
+
+    @pytest.mark.parametrize("period", ["1e999", "1e308", "1e-320"])
+    def test_a_sampling_period_that_no_record_can_have(self, tmp_path: Path, period: str) -> None:
+        text = f"Sampling Period,{period},\nWaveform Data,\n" + "".join(f"{v:.6f},\n" for v in VOLT)
+        refuse(tmp_path, text, "line 3", "nothing says when the samples were taken")
+
+    def test_a_start_so_far_from_zero_that_the_samples_cannot_be_told_apart(self, tmp_path: Path) -> None:
+        text = "X,CH1,Start,Increment,\nSequence,Volt,1e9,1e-9\n" + "".join(
+            f"{i},{v:.6f},\n" for i, v in enumerate(VOLT)
+        )
+        refuse(tmp_path, text, "line 2", "cannot be told apart so far from 0 s", "1e+09 s", "1e-09 s")
 
     def test_two_intervals_that_differ(self, tmp_path: Path) -> None:
         text = "Sample Interval,1e-9\nSample Rate,2e9\n\nn,V\n" + "".join(f"{i},{v:.6f}\n" for i, v in enumerate(VOLT))
@@ -305,6 +364,40 @@ class TestDecimalComma:
     def test_one_column_with_a_decimal_comma(self, tmp_path: Path) -> None:
         rows = [f"{v + 1:.6f}".replace(".", ",") for v in VOLT]
         refuse(tmp_path, "Sample interval = 1e-9\n" + "\n".join(rows) + "\n", "comma may separate the values")
+
+
+class TestLongLines:
+    """A line longer than any that a program writes costs no more time than its length, and is not quoted whole."""
+
+    @pytest.mark.parametrize("piece", ["\t", " ", '"', "in ", "_a", "/", "sampl", ": "])
+    def test_above_the_numbers_it_states_nothing(self, tmp_path: Path, piece: str) -> None:
+        begin = process_time()
+        (tmp_path / "trace.csv").write_text("\n".join([piece * 70_000, *good_lines()]) + "\n", encoding="utf-8")
+        assert read_capture(tmp_path / "trace.csv").outputs[1].signal_V.size == N
+        assert process_time() - begin < 3
+
+    @pytest.mark.parametrize("piece", ["1,", "1.5e-3,", "x", '"', "0;"])
+    def test_below_the_numbers_it_is_refused(self, tmp_path: Path, piece: str) -> None:
+        begin = process_time()
+        refuse(tmp_path, "\n".join([*good_lines(), piece * 70_000]) + "\n", "line 202", "another number of values")
+        assert process_time() - begin < 3
+
+    def test_a_quote_that_is_never_closed(self, tmp_path: Path) -> None:
+        refuse(tmp_path, "\n".join([*good_lines(), '"' + "1" * 200_000]) + "\n", "line 202", "another number of values")
+
+    @pytest.mark.parametrize(
+        "lines",
+        [
+            ["# format = darkedge-capture " + "x" * 50_000, "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"# {'x' * 50_000} = 1", "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"# kind = {'x' * 50_000}", "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"# element = {'9' * 5_000}", "time_s,output_V"],
+            ["# format = darkedge-capture 1", f"time_s,output{'9' * 5_000}_V"],
+            [f"time (s),{'out in ' * 500}"],
+        ],
+    )
+    def test_a_refusal_quotes_only_its_beginning(self, tmp_path: Path, lines: list[str]) -> None:
+        assert len(refuse(tmp_path, "\n".join([*lines, *good_rows()]) + "\n", "...")) < 1500
 
 
 class TestChannels:

@@ -8,6 +8,7 @@ from darkedge.analysis.captures import Capture
 from darkedge.analysis.errors import CaptureError, InputError
 from darkedge.analysis.files.atomic import write_atomic
 from darkedge.analysis.files.foreign import parse_foreign
+from darkedge.analysis.files.numbers import brief
 from darkedge.analysis.files.own_capture import is_own, parse_capture, print_capture
 from darkedge.analysis.files.roles import ChannelRoles
 from darkedge.analysis.files.text import read_text
@@ -43,8 +44,8 @@ def read_capture(path: Path, *, name: str | None = None, channels: ChannelRoles 
     except InputError as error:
         raise CaptureError(
             error.what,
-            where=f"{path}, {error.where}" if error.where else str(path),
-            found=error.found,
+            where=f"{path}, {brief(error.where)}" if error.where else str(path),
+            found=brief(error.found),
             wanted=error.wanted,
             mend=error.mend,
         ) from error

@@ -22,6 +22,8 @@ WORDS: Mapping[str, type[StrEnum]] = {
 TEXTS = ("run", "point", "device", "lot", "coupling", "taken_utc", "darkedge")
 COUNTS = ("element", "driven_element", "averages")
 _POSITIVE = ("load_ohm", "pulse_width_s", "drive_period_s", "input_ohm", "bandwidth_limit_Hz", "probe_ratio")
+_SMALLEST, _LARGEST = 1e-30, 1e30
+"""Magnitudes that a quantity of a bench may have; beyond them arithmetic fails before any instrument does."""
 _NOT_NEGATIVE = ("bias_V", "emitter_current_A", "volts_per_code")
 
 
@@ -101,6 +103,10 @@ def _quantity(name: str, written: str | float | int) -> float | None:
     number = parse_quantity(written, name)
     if name == "volts_per_code" and number == 0:
         return None
+    tiny = name in (*_POSITIVE, *_NOT_NEGATIVE) and 0 < abs(number) < _SMALLEST
+    if tiny or abs(number) > _LARGEST:
+        wanted = f"zero, or a magnitude from {_SMALLEST:g} to {_LARGEST:g}"
+        raise InputError(f"{name} is beyond what any bench has", found=repr(written), wanted=wanted)
     if name in _POSITIVE and number <= 0:
         raise InputError(f"{name} is not positive", found=repr(written), wanted="a value above zero")
     if name in _NOT_NEGATIVE and number < 0:

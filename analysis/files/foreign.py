@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -73,7 +73,7 @@ def parse_foreign(text: bytes, *, name: str, channels: ChannelRoles | None = Non
         outputs=records,
         conditions=stated_conditions(table.layout.settings),
         remarks=_remarks(uneven=uneven, min_max=opened.has_companions, assumed=assumed),
-        read_as=_understood(table, drive, outputs, times),
+        read_as=(*_understood(table, drive, outputs, times), *opened.doubtful),
     )
 
 
@@ -128,30 +128,36 @@ def parse_signal(text: bytes, *, is_drive: bool = False, time_scale: float | Non
         times=times,
         conditions=stated_conditions(table.layout.settings),
         remarks=_remarks(uneven=uneven, min_max=opened.has_companions, assumed=times.unit_assumed),
-        read_as="; ".join((_channel_words(table, channel), _written_words(table), _time_words(table, times))),
+        read_as="; ".join(
+            (_channel_words(table, channel), _written_words(table), _time_words(table, times), *opened.doubtful)
+        ),
     )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Opened:
-    """The numbers of a file, its channels without the second ends of minimum-maximum records, and the columns that count."""
+    """The numbers of a file, its channels without the second ends of minimum-maximum records, and the columns that count.
+
+    `doubtful` says what was left out.
+    """
 
     table: NumberTable
     channels: Sequence[_Channel]
     counting: Sequence[int]
     has_companions: bool
+    doubtful: tuple[str, ...] = ()
 
 
 def _open(text: bytes) -> _Opened:
     layout = find_layout(text)
     _refuse_spectra(layout)
     table = NumberTable(layout=layout, values=read_numbers(layout.body))
-    _refuse_cut_number(table)
+    table, doubtful = _without_cut_number(table)
     stamped, counting = time_places(table)
     found = _channels(table, stamped, counting)
     companions = _companions(table, found)
     found = [channel for place, channel in enumerate(found) if place not in companions]
-    return _Opened(table=table, channels=found, counting=counting, has_companions=bool(companions))
+    return _Opened(table=table, channels=found, counting=counting, has_companions=bool(companions), doubtful=doubtful)
 
 
 def _remarks(*, uneven: bool, min_max: bool, assumed: bool) -> tuple[str, ...]:
@@ -202,11 +208,17 @@ def _refuse_spectra(layout: Layout) -> None:
             )  # fmt: skip
 
 
-def _refuse_cut_number(table: NumberTable) -> None:
-    """A last line without its end may have lost digits: then its number is shorter where all others are alike."""
-    text, rows = table.layout.body.text, table.layout.sample_rows
-    if text.endswith(b"\n") or len(rows) < 3:
-        return
+def _without_cut_number(table: NumberTable) -> tuple[NumberTable, tuple[str, ...]]:
+    """The table without a last number that may have lost digits, and what to say of it.
+
+    A last line without its end is cut off where its number is shorter and all others are alike; where they are not,
+    that cannot be told, and the row is left out. With a separator behind it a number is whole.
+    """
+    body, rows = table.layout.body, table.layout.sample_rows
+    last_line = body.text[body.text.rfind(b"\n") + 1 :].decode("utf-8")
+    whole = not last_line.strip() or last_line.endswith(BLANKS)
+    if whole or len(rows) < 3 or len(body.writing.cells(last_line)) != body.columns[-1] + 1:
+        return table, ()
     forms = {digits_behind(row[-1]) for row in rows if row != rows[-1]}
     last = digits_behind(rows[-1][-1])
     if len(forms) == 1 and any(have < want for have, want in zip(last, forms.pop(), strict=True)):
@@ -217,6 +229,11 @@ def _refuse_cut_number(table: NumberTable) -> None:
             wanted=f"a number written like {rows[0][-1]}",
             mend="export or copy it again",
         )
+    if len(forms) <= 1:
+        return table, ()
+    layout = replace(table.layout, sample_rows=rows[:-1])
+    words = f"left out: {table.line(len(table.values) - 1)}, whose number may have lost digits, for the line has no end"
+    return NumberTable(layout=layout, values=table.values[:-1]), (words,)
 
 
 def _channels(table: NumberTable, times: Sequence[int], counting: Sequence[int]) -> list[_Channel]:

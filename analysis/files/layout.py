@@ -6,13 +6,14 @@ numbers begin where such lines begin, and what stands above or beside them is he
 
 from __future__ import annotations
 
+import math
 import re
 from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 from darkedge.analysis.errors import CaptureError
-from darkedge.analysis.files.numbers import BLANKS, Body, Writing, shown
+from darkedge.analysis.files.numbers import BLANKS, Body, Writing, is_step, shown
 from darkedge.analysis.files.units_written import Dimension, WrittenUnit, read_unit, split_unit
 
 FEWEST_ROWS = 8
@@ -25,7 +26,13 @@ _WRITINGS = tuple(
     Writing(separator=separator, decimal=decimal) for separator in ("\t", ";", ",", BLANKS) for decimal in (".", ",")
 )
 _DOUBTFUL = Writing(separator=",", decimal=",")
-_COMMENT = re.compile(r"\s*(?:#|%|//)\s?")
+_COMMENT = re.compile(r"\A\s*(?:#|%|//)\s?")
+_ONLY_NUMBERS = re.compile(r"[\d\s.,;+\-eE\"]+", re.ASCII)
+_NEARLY_A_NUMBER = re.compile(r"[+-]?\d[\d.,]*(?:[eE][+-]?\d+)?[.,]?\s?(?P<unit>[^\W\d]{0,8})")
+_DATE = re.compile(r"\d{1,4}\.\d{1,2}\.\d{0,4}")
+_MARKS = {".": "point", ",": "comma"}
+_LONGEST_HEADING = 4000
+"""Characters of a line of headings or settings; what is longer states nothing that could be understood."""
 _INDEX_WORDS = {"sequence", "index", "sample", "samples", "point", "points", "no", "no.", "nr", "nr.", "n", "#"}
 _INCREMENT_WORDS = ("incr", "step", "interval", "delta", "period")
 
@@ -80,6 +87,7 @@ def find_layout(text: bytes) -> Layout:
         first = _first_row(head, writing, columns, complete=True)
     if first is None:
         raise _too_few(tail, text, columns)
+    _refuse_other_numbers_above(head[:first])
     first_cells = [writing.cells(line) for line in _filled(head[first:], writing, _SAMPLE_ROWS)]
     columns = _with_shorter_channels(columns, first_cells, writing)
     n_cells = max(n_cells, columns[-1] + 1)
@@ -154,6 +162,7 @@ def _find_writing(rows: Sequence[str], text: bytes) -> tuple[Writing, tuple[int,
     _, writing, columns = best
     if writing.separator == "," and writing.decimal == "." and not quoted:
         _refuse_varying_commas(rows, writing, text)
+    _refuse_other_writing(rows, writing, text)
     n_cells = Counter(len(writing.cells(row)) for row in rows if _numeric(row, writing)[0] == columns)
     return writing, columns, n_cells.most_common(1)[0][0]
 
@@ -174,8 +183,9 @@ def _patterns(rows: Sequence[str], writing: Writing) -> tuple[Counter[tuple[int,
 def _numeric(row: str, writing: Writing) -> tuple[tuple[int, ...], bool]:
     """The cells that are numbers, and whether the others are blank."""
     cells = writing.cells(row)
-    columns = tuple(c for c, cell in enumerate(cells) if writing.is_number(cell))
-    return columns, all(c in columns or writing.is_missing(cell) for c, cell in enumerate(cells))
+    numbers = [writing.is_number(cell) for cell in cells]
+    columns = tuple(c for c, number in enumerate(numbers) if number)
+    return columns, all(number or writing.is_missing(cell) for number, cell in zip(numbers, cells, strict=True))
 
 
 def _refuse_varying_commas(rows: Sequence[str], writing: Writing, text: bytes) -> None:
@@ -184,6 +194,26 @@ def _refuse_varying_commas(rows: Sequence[str], writing: Writing, text: bytes) -
     odd = len(rows) - counts.most_common(1)[0][1]
     if odd >= max(2, len(rows) // 4) and not any("." in row for row in rows):
         raise _undecided_comma(f"line {_last_line(text)}", rows[-1])
+
+
+def _refuse_other_writing(rows: Sequence[str], writing: Writing, text: bytes) -> None:
+    """A column of numbers in another writing, such as `0,5,` or `0.5 V`, is no text that may be left aside."""
+    cells = [writing.cells(row) for row in rows]
+    for column in range(min(map(len, cells))):
+        if all(_nearly_a_number(row[column], writing) for row in cells):
+            raise CaptureError(
+                "a column of numbers that cannot be read", where=f"line {_last_line(text)}, column {column + 1}",
+                found=shown(cells[-1][column]), wanted=f"numbers with a decimal {_MARKS[writing.decimal]} and nothing else",
+                mend="export again, with the unit in the heading",
+            )  # fmt: skip
+
+
+def _nearly_a_number(cell: str, writing: Writing) -> bool:
+    """Whether a cell that is no number was meant as one; a date was not."""
+    match = _NEARLY_A_NUMBER.fullmatch(cell)
+    if match is None or writing.is_number(cell) or _DATE.fullmatch(cell):
+        return False
+    return not match["unit"] or read_unit(match["unit"]) is not None
 
 
 def _refuse_doubtful_commas(layout: Layout, *, named: bool) -> None:
@@ -262,6 +292,20 @@ def _refuse_rows_above(
         )  # fmt: skip
 
 
+def _refuse_other_numbers_above(above: Sequence[str]) -> None:
+    """Rows of numbers in another layout above these are another capture, no heading."""
+    run = 0
+    for number, line in enumerate(above, start=1):
+        if not line.strip(" \t,;"):
+            continue
+        run = run + 1 if _ONLY_NUMBERS.fullmatch(line) and re.search(r"\d", line) else 0
+        if run >= FEWEST_ROWS:
+            raise CaptureError(
+                "rows of numbers in two layouts", where=f"line {number}", found=shown(line),
+                wanted="one capture in a file", mend="split the file where the second begins",
+            )  # fmt: skip
+
+
 def _filled(lines: Sequence[str], writing: Writing, count: int) -> list[str]:
     rows: list[str] = []
     for line in lines:
@@ -285,6 +329,8 @@ def _settings(
     lines: Sequence[str], first: int, writing: Writing, columns: tuple[int, ...]
 ) -> Iterator[tuple[int, tuple[str, ...]]]:
     for number, line in enumerate(lines[:first], start=1):
+        if len(line) > _LONGEST_HEADING:
+            continue
         bare = _COMMENT.sub("", line, count=1)
         split = re.split(r"\s*[:=]\s+|\s*=\s*|\t|,", bare) if _COMMENT.match(line) else writing.cells(bare)
         if len(split) == 1:
@@ -295,6 +341,8 @@ def _settings(
     if columns[0] == 0 and len(columns) == columns[-1] + 1:
         return
     for number, line in enumerate(lines[first:], start=first + 1):
+        if len(line) > _LONGEST_HEADING:
+            continue
         cells = tuple(cell for c, cell in enumerate(writing.cells(line)) if cell and c not in columns)
         if cells:
             yield number, cells
@@ -351,6 +399,8 @@ class _Headings:
 
 def _heading_cells(line: str, writing: Writing, columns: tuple[int, ...]) -> list[str] | None:
     """The cells of a heading, each at the place of its column, where the line can be split so."""
+    if len(line) > _LONGEST_HEADING:
+        return None
     bare = _COMMENT.sub("", line, count=1).strip("\n")
     if writing.separator != BLANKS and writing.separator in bare:
         return [cell.strip('"') for cell in writing.cells(bare)]
@@ -396,13 +446,13 @@ def _start_and_increment(
 ) -> tuple[float | None, float | None]:
     """Two numbers behind the units: start and increment, in the order their names say, else in this one."""
     numbers = {c: float(cell) for c, cell in enumerate(units) if c > columns[-1] and _is_plain_number(cell)}
-    if len(numbers) != 2:
+    if len(numbers) != 2 or not all(map(math.isfinite, numbers.values())):
         return None, None
     first, second = numbers
     over_first = _at(names, first).casefold() if names is not None else ""
     if any(word in over_first for word in _INCREMENT_WORDS):
         first, second = second, first
-    return (numbers[first], numbers[second]) if numbers[second] > 0 else (None, None)
+    return (numbers[first], numbers[second]) if is_step(numbers[second]) else (None, None)
 
 
 def _is_plain_number(cell: str) -> bool:

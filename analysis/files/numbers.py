@@ -26,6 +26,9 @@ _BARE_COMMA = re.compile(rb",(?!\d)")
 _NO_NUMBER = re.compile(r"[+-]?(?:nan|1\.#(?:qnan|ind))", re.IGNORECASE)
 _INFINITE = re.compile(r"[+-]?(?:inf|infinity|1\.#inf)", re.IGNORECASE)
 _QUOTE = '"'
+_OUT_OF_RANGE = 9.9e37
+"""What instruments write for infinity, and larger (SCPI-1999, volume 1, 7.2.1.4)."""
+_SHORTEST_STEP_S, _LONGEST_STEP_S = 1e-18, 1e9
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -41,7 +44,7 @@ class Writing:
         if self.separator == BLANKS:
             return line.split()
         if self.quoted and _QUOTE in line:
-            return [cell.strip() for cell in next(csv.reader([line], delimiter=self.separator, skipinitialspace=True))]
+            return _quoted_cells(line, self.separator)
         return [cell.strip() for cell in line.split(self.separator)]
 
     def is_number(self, cell: str) -> bool:
@@ -71,6 +74,18 @@ class Body:
     writing: Writing
     columns: tuple[int, ...]
     n_cells: int
+
+
+def is_step(step_s: float) -> bool:
+    """Whether a number of seconds can be the step of a record: what is stated may be anything."""
+    return _SHORTEST_STEP_S <= step_s <= _LONGEST_STEP_S
+
+
+def _quoted_cells(line: str, separator: str) -> list[str]:
+    try:
+        return [cell.strip() for cell in next(csv.reader([line], delimiter=separator, skipinitialspace=True))]
+    except csv.Error:  # a quote that is never closed, in a line longer than any cell may be
+        return [cell.strip() for cell in line.split(separator)]
 
 
 def read_numbers(body: Body) -> FloatArray:
@@ -124,7 +139,7 @@ def read_at_once(body: Body) -> FloatArray | None:
     except pa.ArrowInvalid:
         return None
     values = np.column_stack([table.column(name).to_numpy() for name in wanted])
-    return values if values.size and bool(np.all(np.isfinite(values))) else None
+    return values if values.size and bool(np.all(np.abs(values) < _OUT_OF_RANGE)) else None
 
 
 def read_by_line(body: Body) -> FloatArray:
@@ -159,7 +174,7 @@ def _row(body: Body, line: str, number: int, *, unended: bool) -> list[float]:
         cell = cells[column]
         if writing.is_number(cell):
             values.append(writing.number(cell))
-            if np.isfinite(values[-1]):
+            if abs(values[-1]) < _OUT_OF_RANGE:
                 continue
             raise _infinite(number, cell)
         if writing.is_missing(cell):
@@ -222,6 +237,11 @@ def shown(text: str, longest: int = 60) -> str:
     """Text for a message: quoted, and cut where it is long."""
     cut = text.strip()
     return repr(cut if len(cut) <= longest else f"{cut[:longest]}...")
+
+
+def brief(text: str, longest: int = 400) -> str:
+    """What an error quotes from a file, cut where the file has far more than anybody reads."""
+    return text if len(text) <= longest else f"{text[:longest]}..."
 
 
 def text_of(cells: Sequence[str]) -> str:

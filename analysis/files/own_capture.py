@@ -29,7 +29,7 @@ HEADER_ORDER: tuple[str, ...] = (
 
 _FORMAT_LINE = re.compile(rb"#\s*format\s*=\s*darkedge-")
 _HEADER_LINE = re.compile(r"#\s*(?P<name>\w+)\s*=(?P<value>.*)")
-_OUTPUT = re.compile(r"output([1-9]\d*)?_V")
+_OUTPUT = re.compile(r"output([1-9]\d{0,8})?_V", re.ASCII)
 _FEWEST_DIGITS = 6
 
 

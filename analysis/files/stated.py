@@ -8,6 +8,7 @@ from collections.abc import Iterator, Sequence
 from darkedge.analysis.captures import Conditions
 from darkedge.analysis.errors import InputError
 from darkedge.analysis.files.condition_values import CONDITION_NAMES, conditions_from, parse_condition
+from darkedge.analysis.files.numbers import is_step
 from darkedge.analysis.files.units_written import Dimension, WrittenUnit, read_unit
 
 Settings = Sequence[tuple[int, tuple[str, ...]]]
@@ -56,7 +57,9 @@ def stated_steps(settings: Settings, *, only_named: bool) -> list[float]:
             if only_named and not (_RATE_WORDS if is_rate else _STEP_WORDS).search(key):
                 continue
             value = number * (unit.scale if unit is not None else 1.0)
-            steps.append(1 / value if is_rate else value)
+            step = 1 / value if is_rate and value > 0 else value
+            if is_step(step):
+                steps.append(step)
     return list(dict.fromkeys(steps))
 
 

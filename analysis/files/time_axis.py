@@ -13,6 +13,9 @@ from darkedge.analysis.errors import CaptureError
 EVEN_RATIO = 0.01
 """Steps within 1 % of their median are even."""
 
+_SHORTEST_STEP_S = 1e-24
+"""Below any step of a scope or a simulator; what is divided by it stays a number."""
+
 _LAST_BITS = 64
 _SAME_RATIO = 1e-6
 
@@ -56,7 +59,7 @@ def time_axis(
     Raises
     ------
     TimeAxisError
-        The time falls, or stands still and no stated step explains it.
+        The time falls, or rises by less than any record's, or stands still and no stated step explains it.
     """
     steps = np.diff(stamps_s)
     least, most = float(np.min(steps)), float(np.max(steps))
@@ -64,6 +67,9 @@ def time_axis(
         return TimeAxis(t0_s=float(stamps_s[0]), dt_s=even_step(stamps_s))
     if least < 0:
         raise _fault("the time goes back", stamps_s, int(np.flatnonzero(steps < 0)[0]) + 1)
+    short = (steps > 0) & (steps < _SHORTEST_STEP_S)
+    if bool(np.any(short)):
+        raise _fault("the time steps are shorter than any record's", stamps_s, int(np.flatnonzero(short)[0]) + 1)
     middle = float(np.median(steps))
     if middle > 0 and bool(np.all(np.abs(steps - middle) <= EVEN_RATIO * middle)):
         t0_s, dt_s = float(stamps_s[0]), even_step(stamps_s)

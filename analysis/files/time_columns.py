@@ -21,6 +21,11 @@ LONGEST_BARE_STEP_S = 1e-4
 
 _SAME_STEP_RATIO = 0.01
 
+_MENDS = (
+    ("still", "export the times with more digits, or add a line such as: # sample interval = 2e-9 s"),
+    ("shorter", "check the unit of the time"),
+)
+
 _TIME_NAMES = re.compile(r"(?:time|t|tiempo|zeit|temps|tempo|tid|x|x-axis)[ _]?\d*\b", re.IGNORECASE)
 _OTHER_NAMES = re.compile(
     r"\b(?:freq|hertz|volt|bias|curr|capac|wavel|temp(?:erat|\b)|dist|posit|angle|cycle|phase|power|leak|dark|load)"
@@ -220,17 +225,12 @@ def _axis(
     try:
         return time_axis(stamps, quanta_s=quanta, increments_s=increments)
     except TimeAxisError as fault:
-        stands = "still" in fault.what
         raise CaptureError(
             fault.what,
             where=f"{table.line(first + fault.row)}, {table.called(place)}",
             found=fault.found,
             wanted="times that rise from row to row",
-            mend=(
-                "export the times with more digits, or add a line such as: # sample interval = 2e-9 s"
-                if stands
-                else "export one acquisition to a file"
-            ),
+            mend=next((mend for word, mend in _MENDS if word in fault.what), "export one acquisition to a file"),
         ) from fault
 
 
@@ -248,6 +248,11 @@ def _counted_times(table: NumberTable, place: int | None) -> Times:
             mend="export with time, or add a line such as: # sample interval = 2e-9 s",
         )  # fmt: skip
     start_s = layout.start_s or 0.0
+    if float(np.spacing(abs(start_s))) > EVEN_RATIO * steps[0]:
+        raise CaptureError(
+            "the samples cannot be told apart so far from 0 s", where=table.heading,
+            found=f"a start at {start_s:g} s, steps of {steps[0]:g} s", wanted="a start and a step of one record",
+        )  # fmt: skip
     if place is None:
         return Times(place=None, axis=TimeAxis(t0_s=start_s, dt_s=steps[0]), first=0, count=len(table.values))
     first, count = finite_part(table, table.values[:, place], place)
