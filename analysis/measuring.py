@@ -121,6 +121,22 @@ def _in_groups(captures: Iterable[Capture]) -> Iterator[list[Capture]]:
         yield group
 
 
+def measure_one(
+    capture: Capture, fixture: Fixture, reference: ReferenceLevels = TEN_FIFTY_NINETY
+) -> Sequence[Measurement | StillTrace]:
+    """Measure one capture as far as it goes by itself: a still trace waits for the offset traces of its run.
+
+    Raises
+    ------
+    DarkedgeError
+        The capture cannot be measured.
+    """
+    (found,) = measure_group([(capture, fixture)], reference)
+    if isinstance(found, DarkedgeError):
+        raise found
+    return found
+
+
 def measure_group(
     captures: Sequence[tuple[Capture, Fixture]], reference: ReferenceLevels = TEN_FIFTY_NINETY
 ) -> list[Sequence[Measurement | StillTrace] | DarkedgeError]:

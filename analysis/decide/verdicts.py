@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 from scipy import stats
@@ -20,6 +21,7 @@ from darkedge.analysis.uncertainty import coverage_factor
 _BOUND_CONFIDENCE = 0.95
 _NUMBERS = (*CONDITIONS, "element", "driven_element")
 _WORDS = ("run", "kind", "device", "lot", "reference", *DEVICE)
+TEN_NINETY_WORDS = "10/50/90 %"
 _SAME_TEMPERATURE_K = 5.0
 Where = tuple[str | None, str | None, int | None]
 
@@ -183,10 +185,43 @@ def _limit_verdict(rows: Sequence[Measurement], limit: Limit, limits: Limits, re
         return LimitVerdict(
             limit=limit, verdict=Verdict.UNDECIDED, estimate=None, probability_conforming=None, reason=reason
         )
+    if (other := _other_levels(matching, limit)) is not None:
+        return LimitVerdict(
+            limit=limit, verdict=Verdict.UNDECIDED, estimate=None, probability_conforming=None,
+            reason=f"timed between other levels than the limit's 10 and 90 %: {other}",
+        )  # fmt: skip
     each = [_judge_repeats(repeats, limit, limits) for repeats in _repeats(matching)]
+    each = [_without_settling(verdict, limit, matching) for verdict in each]
     order = {Verdict.FAIL: 0, Verdict.UNDECIDED: 1, Verdict.PASS: 2}
     return min(
         each, key=lambda v: (order[v.verdict], 1.0 if v.probability_conforming is None else v.probability_conforming)
+    )
+
+
+def _without_settling(verdict: LimitVerdict, limit: Limit, rows: Sequence[Measurement]) -> LimitVerdict:
+    """An edge of a pulse that never settles is timed against its peak, which a limit on the settled edge does not mean."""
+    if verdict.verdict is not Verdict.PASS or limit.quantity not in ("rise_time_s", "fall_time_s", "amplitude_V"):
+        return verdict
+    judged = [row for row in rows if row.capture in verdict.captures]
+    if not any("never_settles" in row.flags for row in judged):
+        return verdict
+    return replace(
+        verdict, verdict=Verdict.UNDECIDED,
+        reason="the pulse never settles: the edge was timed against its peak; lengthen the pulse, or limit under pulse_width_s",
+    )  # fmt: skip
+
+
+def _other_levels(rows: Sequence[Measurement], limit: Limit) -> str | None:
+    """The words of other outer levels than 10 and 90 %, between which a limited edge was timed; `None` where there are none."""
+    if limit.quantity not in ("rise_time_s", "fall_time_s"):
+        return None
+    return next(
+        (
+            row.levels
+            for row in rows
+            if row.levels and row.levels.startswith("histogram") and TEN_NINETY_WORDS not in row.levels
+        ),
+        None,
     )
 
 

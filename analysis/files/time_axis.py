@@ -63,7 +63,7 @@ def time_axis(
     """
     steps = np.diff(stamps_s)
     least, most = float(np.min(steps)), float(np.max(steps))
-    if least > 0 and most - least <= EVEN_RATIO * least:  # then all are that near to their median, too
+    if least >= _SHORTEST_STEP_S and most - least <= EVEN_RATIO * least:  # then all are that near to their median, too
         return TimeAxis(t0_s=float(stamps_s[0]), dt_s=even_step(stamps_s))
     if least < 0:
         raise _fault("the time goes back", stamps_s, int(np.flatnonzero(steps < 0)[0]) + 1)

@@ -27,6 +27,12 @@ LEAST_SIGNAL_TO_NOISE = 5.0
 LEAST_CODES = 2.0
 """Amplitude in codes of the digitiser below which no pulse is claimed."""
 
+CUT_RATIO = 0.12
+"""Share of an edge that may lie outside the record and the edge still be timed: a little over the 10 % before its first level."""
+
+ENDS = 4
+"""Samples at each end of a record that say how far an edge had got."""
+
 LEVEL_SHIFT_RATIO = 2e-3
 """A change of a level by more than this share of the amplitude moves the plateaus enough to look at them again."""
 
@@ -133,12 +139,15 @@ def _one_by_one(look: FirstLook, fractions: tuple[float, ...]) -> Channel | None
     refined = _refined(time, signal, look.levels, look.changes, look.hiss_V, look.step_V)
     if refined is None or _is_drift(refined, look.changes):
         return None
+    changes = _whole(signal, refined, look.changes)
+    if changes.index.size == 0:
+        return None
     transitions = locate_crossings(
-        time, signal, levels=refined.levels, changes=look.changes, noise=with_codes(refined.noise, look.step_V),
+        time, signal, levels=refined.levels, changes=changes, noise=with_codes(refined.noise, look.step_V),
         fractions=fractions,
     )  # fmt: skip
     return Channel(
-        levels=refined.levels, noise=refined.noise, transitions=transitions, changes=look.changes, low=refined.low,
+        levels=refined.levels, noise=refined.noise, transitions=transitions, changes=changes, low=refined.low,
         high=refined.high, step_V=look.step_V, hiss_V=look.hiss_V, start_s=float(time[0]), end_s=float(time[-1]),
     )  # fmt: skip
 
@@ -165,6 +174,21 @@ def _refined(
         if not again or not (unlike or moved > LEVEL_SHIFT_RATIO * new.amplitude_V):
             break
     return refined
+
+
+def _whole(signal_V: FloatArray, refined: Refined, changes: Changes) -> Changes:
+    """The changes that the record shows whole: it may begin after an edge has begun, and end before one has ended."""
+    levels = refined.levels
+    allowed = CUT_RATIO + 3 * refined.noise.sigma_V / levels.amplitude_V / ENDS**0.5
+    first, last = (
+        (float(np.mean(part)) - levels.low_V) / levels.amplitude_V for part in (signal_V[:ENDS], signal_V[-ENDS:])
+    )
+    begun = first if changes.rising[0] else 1.0 - first
+    unended = 1.0 - last if changes.rising[-1] else last
+    whole = np.ones(changes.index.size, dtype=np.bool_)
+    whole[0] &= begun <= allowed
+    whole[-1] &= unended <= allowed
+    return changes if bool(np.all(whole)) else changes.select(whole)
 
 
 def _unlike(found: Noise, assumed: Noise) -> bool:

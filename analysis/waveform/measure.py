@@ -174,11 +174,26 @@ def _measure_element(
     )  # fmt: skip
     quantities = job.levels() | job.times()
     flags |= job.flags(quantities)
+    if "clipped" in flags:
+        quantities = _of_clipped(quantities)
     return Measurement(
         capture=capture.name, element=element, conditions=conditions, quantities=quantities, flags=tuple(flags),
         levels=reference.words, estimator=job.estimator(), n_pulses=job.n_pulses(),
         trigger_s=None if drive is None or drive.transitions.rising.size == 0 else float(drive.transitions.time_s[0, 1]),
     )  # fmt: skip
+
+
+_OF_CLIPPED = ("width_in_s", "duty_in")
+"""What a clipped output leaves: what the drive alone says."""
+
+
+def _of_clipped(quantities: dict[str, Estimate]) -> dict[str, Estimate]:
+    """What is left where the output runs into the end of the range: its amplitude is at least what shows, and no time of it is known."""
+    found = {name: quantities[name] for name in _OF_CLIPPED if name in quantities}
+    seen = quantities.get("amplitude_V")
+    if seen is not None and seen.value is not None and seen.u is not None:
+        found["amplitude_V"] = Estimate(lo95=seen.value - 1.645 * seen.u)
+    return found
 
 
 def _hidden_amplitude(record: Record, drive: Channel | None) -> dict[str, Estimate]:
@@ -420,6 +435,8 @@ class _Job:
         if self.conditions.device_kind in _SWITCHES:
             found.discard("slow_tail")
         pairing = self.pairing
+        if self.estimator() == BY_POLYNOMIAL:
+            found.add("shape_free")
         if self.drive is not None and (pairing is None or pairing.left_over):
             found.add("unpaired")
         if self.period_s() is None:
