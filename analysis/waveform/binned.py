@@ -76,7 +76,7 @@ class CutEdges:
         count = np.maximum(end - begin, 1)
         volts = (self.sums[place + end] - self.sums[place + begin]) / count + self.offset_V[:, None]
         upward = (volts - self.low_V[:, None]) / self.amplitude_V[:, None]
-        return np.where(self.rising[:, None], upward, 1.0 - upward)
+        return np.asarray(np.where(self.rising[:, None], upward, 1.0 - upward))
 
 
 def cut_edges(looks: Sequence[FirstLook]) -> CutEdges:
@@ -146,7 +146,7 @@ def _quarters(edges: CutEdges, rows: IntArray, low: IntArray, high: IntArray) ->
     picked = edges if rows.size == edges.channel.size else edges.select(rows)
     progress = picked.means(begin, end)
     count = end - begin
-    centre = 0.5 * (begin + end - 1)
+    centre = np.asarray(0.5 * (begin + end - 1), dtype=np.float64)
     found = np.empty((rows.size, 3))
     for column, level in enumerate(TEN_NINETY):
         excess = np.clip(progress - level, -0.1, 0.1) * count

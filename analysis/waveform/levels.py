@@ -70,7 +70,7 @@ def histogram_levels(signal_V: FloatArray, *, smooth: int = 1) -> StateLevels | 
     low_is_state = lower.holds(PLATEAU_SHARE if lower.outer or not upper.outer else INNER_PLATEAU_SHARE)
     high_is_state = upper.holds(PLATEAU_SHARE if upper.outer or not lower.outer else INNER_PLATEAU_SHARE)
     width = (top - bottom) / BINS
-    sums = np.bincount(place, values - bottom, minlength=BINS + 1)
+    sums = np.asarray(np.bincount(place, values - bottom, minlength=BINS + 1), dtype=np.float64)
     low = bottom + _mean_about(sums, counts, BINS // 2 - 1 - lower.place, width) if low_is_state else bottom
     high = bottom + _mean_about(sums, counts, BINS // 2 + upper.place, width) if high_is_state else top
     return StateLevels(low_V=low, high_V=high) if high > low else None

@@ -111,10 +111,10 @@ def sigma_of_steps(steps: FloatArray, reach_V: Callable[[], float]) -> float:
 def steps_between(signal_V: FloatArray) -> FloatArray:
     """Absolute differences of neighbouring samples; of a long record only in stretches spread evenly over it."""
     if signal_V.size <= MOST_DIFFERENCES + STRETCHES:
-        return np.abs(np.diff(signal_V))
+        return np.asarray(np.abs(np.diff(signal_V)))
     each = MOST_DIFFERENCES // STRETCHES
     starts = np.linspace(0, signal_V.size - each - 1, STRETCHES).astype(np.intp)
-    return np.abs(np.concatenate([np.diff(signal_V[k : k + each + 1]) for k in starts]))
+    return np.asarray(np.abs(np.concatenate([np.diff(signal_V[k : k + each + 1]) for k in starts])))
 
 
 def code_step_V(signal_V: FloatArray, stated_V: float | None = None) -> float:

@@ -89,7 +89,7 @@ def _paired(drive: Transitions, output: Transitions, slack: float, *, inverting:
 
 def middle(values: FloatArray) -> float:
     """Median of a few values."""
-    ordered = sorted(values.tolist())
+    ordered: list[float] = sorted(values.tolist())
     half = len(ordered) // 2
     return ordered[half] if len(ordered) % 2 else 0.5 * (ordered[half - 1] + ordered[half])
 

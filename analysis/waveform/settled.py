@@ -268,9 +268,9 @@ def fit_settled(
     cut = cut_edges(looks)
     fit_for = np.ones(len(looks), dtype=np.bool_)
     np.logical_and.at(fit_for, cut.channel, cut.settled)
-    kept = np.flatnonzero(fit_for)
+    kept = [int(k) for k in np.flatnonzero(fit_for)]
     found: list[SettledChannel | None] = [None] * len(looks)
-    if kept.size == 0:
+    if not kept:
         return found
     rows = np.flatnonzero(fit_for[cut.channel])
     renumbered = np.cumsum(fit_for) - 1
@@ -280,7 +280,7 @@ def fit_settled(
         pools=[None if pools is None else pools[k] for k in kept],
     )
     for k, channel in zip(kept, job.channels(fractions), strict=True):
-        found[int(k)] = channel
+        found[k] = channel
     return found
 
 

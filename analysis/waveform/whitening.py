@@ -57,7 +57,7 @@ def _lower(covariance: FloatArray) -> FloatArray:
         raised = covariance.copy()
         raised[diagonal] *= 1 + share
         try:
-            return np.linalg.cholesky(raised)
+            return np.asarray(np.linalg.cholesky(raised), dtype=np.float64)
         except np.linalg.LinAlgError:
             continue
     return np.asarray(np.diag(np.sqrt(covariance[diagonal])))
