@@ -65,6 +65,15 @@ Channels = Annotated[
         show_default=False,
     ),
 ]
+Cluster = Annotated[
+    str | None,
+    typer.Option(
+        "--cluster",
+        metavar="ADDRESS",
+        help="Let the workers of a Dask scheduler read and measure, such as tcp://host:8786.",
+        show_default=False,
+    ),
+]
 Jobs = Annotated[int, typer.Option("--jobs", metavar="N", help="Processes that read and measure.", min=1, max=256)]
 Json = Annotated[bool, typer.Option("--json", help="Print JSON instead of a table.")]
 PlotFolder = Annotated[
@@ -104,6 +113,7 @@ def take_in_paths(
     fixture: Path | None,
     channels: str | None,
     jobs: int = 1,
+    cluster: str | None = None,
     reference: ReferenceLevels | None = None,
 ) -> Intake:
     """Read and measure what the paths hold, with a progress bar, and tell what was refused."""
@@ -129,6 +139,7 @@ def take_in_paths(
             channels=channels,
             today=datetime.now(UTC).date(),
             jobs=jobs,
+            cluster=cluster,
             reference=reference or TEN_FIFTY_NINETY,
             progress=tell,
         )

@@ -9,6 +9,7 @@ import typer
 
 from darkedge.cli.common import (
     Channels,
+    Cluster,
     ConditionsTable,
     FixtureFile,
     Jobs,
@@ -46,6 +47,7 @@ def measure(
     channels: Channels = None,
     out: Out = None,
     jobs: Jobs = 1,
+    cluster: Cluster = None,
     levels: Annotated[
         str | None,
         typer.Option(
@@ -85,6 +87,7 @@ def measure(
         fixture=fixture,
         channels=channels,
         jobs=jobs,
+        cluster=cluster,
         reference=_reference(levels, threshold),
     )
     from darkedge.analysis.files.tables import table_json, write_table

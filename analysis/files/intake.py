@@ -15,6 +15,7 @@ from darkedge.analysis.captures import Capture, Conditions
 from darkedge.analysis.errors import CaptureError, DarkedgeError, FixtureError, InputError
 from darkedge.analysis.files.archive import archive_fixtures, is_archive, write_archive
 from darkedge.analysis.files.captures import read_capture
+from darkedge.analysis.files.cluster import over_cluster
 from darkedge.analysis.files.conditions import ConditionsTable, read_conditions
 from darkedge.analysis.files.fixture_file import read_fixture
 from darkedge.analysis.files.gather import Source, find_captures
@@ -76,6 +77,7 @@ def take_in(
     channels: str | None = None,
     today: date,
     jobs: int = 1,
+    cluster: str | None = None,
     reference: ReferenceLevels = TEN_FIFTY_NINETY,
     progress: Progress | None = None,
 ) -> Intake:
@@ -94,6 +96,8 @@ def take_in(
         Tells an expired fixture where a capture does not say when it was taken.
     jobs : int
         Processes that read and measure. The result is the same, in the same order, for any number.
+    cluster : str, optional
+        Address of a Dask scheduler whose workers read and measure instead.
     reference : ReferenceLevels
         Where the instants of pulses are taken.
     progress : callable, optional
@@ -104,6 +108,8 @@ def take_in(
     InputError
         The request as a whole is wrong: a path that is not there, a pattern, table, plan or fixture that is wrong.
     """
+    if cluster is not None:
+        paths = [path.resolve() for path in paths]  # workers stand in folders of their own
     pattern = None if names is None else NamePattern(names)
     roles = None if channels is None else ChannelRoles.parse(channels)
     stated = None if conditions is None else read_conditions(conditions)
@@ -122,7 +128,7 @@ def take_in(
     reading.check_stated()
     found: list[Measurement | StillTrace] = []
     refused: list[Refused] = []
-    for done, taken in enumerate(take_each(reading, jobs=jobs), start=1):
+    for done, taken in enumerate(take_each(reading, jobs=jobs, cluster=cluster), start=1):
         found.extend(taken.rows)
         if taken.refused is not None:
             refused.append(taken.refused)
@@ -199,21 +205,24 @@ class Taken:
     refused: Refused | None = None
 
 
-def take_each(reading: _Reading, *, jobs: int) -> Iterator[Taken]:
-    """Take the sources in their order, in one process or in several.
+def take_each(reading: _Reading, *, jobs: int, cluster: str | None = None) -> Iterator[Taken]:
+    """Take the sources in their order, in one process, in several, or on the workers of a cluster.
 
     Raises
     ------
     InputError
-        `jobs` is below 1.
+        `jobs` is below 1, or the cluster cannot be used.
     """
     names = list(reading.sources)
-    size = min(
-        GROUP, max(1, -(-len(names) // 4))
-    )  # of few sources, small groups: whatever `jobs` is, the groups are the same
+    # Of few sources, small groups; whatever `jobs` is, the groups are the same, and so are the results.
+    size = min(GROUP, max(1, -(-len(names) // 4)))
     groups = [names[k : k + size] for k in range(0, len(names), size)]
     if jobs < 1:
         raise InputError("jobs is not a number of processes", found=str(jobs), wanted="1 or more")
+    if cluster is not None:
+        for taken in over_cluster(cluster, _Reading.take, reading, groups):
+            yield from taken
+        return
     if jobs == 1 or len(groups) < 2:
         for group in groups:
             yield from reading.take(group)
