@@ -43,7 +43,8 @@ def over_cluster(
             "the engine for --cluster is not installed", where="--cluster", mend="pip install 'darkedge[cluster]'"
         ) from error
     try:
-        client: Any = distributed.Client(address, timeout=CONNECT_S, set_as_default=False)
+        make: Any = distributed.Client
+        client: Any = make(address, timeout=CONNECT_S, set_as_default=False)
     except (OSError, ValueError, TimeoutError) as error:
         raise InputError(
             "no scheduler answers", where="--cluster", found=address, wanted="the address of a running one, tcp://host:port",
