@@ -90,11 +90,12 @@ def interpolated(rng: np.random.Generator, clean: FloatArray, noise: float, *_: 
     return np.concatenate((many, np.full(clean.size - many.size, many[-1])))
 
 
-def coded(rng: np.random.Generator, clean: FloatArray, noise: float, *_: object) -> FloatArray:
+def coded(rng: np.random.Generator, clean: FloatArray, *_: object) -> FloatArray:
     """Eight bits over 1.3 times the amplitude, with noise of a tenth to a third of a code."""
     step = 1.3 / 256
     small = step * float(rng.uniform(0.1, 0.33))
-    return np.asarray(np.round((clean + 0.1 * noise + small * rng.standard_normal(clean.size)) / step) * step)
+    shift = step * float(rng.uniform(0, 1))  # where the levels lie between two codes
+    return np.asarray(np.round((clean + shift + small * rng.standard_normal(clean.size)) / step) * step - shift)
 
 
 def averaged(

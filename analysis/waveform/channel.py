@@ -16,7 +16,7 @@ from darkedge.analysis.waveform.edges import (
     rough_crossings,
 )
 from darkedge.analysis.waveform.first_look import FirstLook, look_at
-from darkedge.analysis.waveform.levels import StateLevels
+from darkedge.analysis.waveform.levels import StateLevels, running_mean
 from darkedge.analysis.waveform.noise import Noise
 from darkedge.analysis.waveform.plateaus import Plateau, Refined, refine_levels
 from darkedge.analysis.waveform.settled import SettledChannel, SettledEdges, fit_settled
@@ -31,7 +31,7 @@ CUT_RATIO = 0.12
 """Share of an edge that may lie outside the record and the edge still be timed: a little over the 10 % before its first level."""
 
 ENDS = 4
-"""Samples at each end of a record that say how far an edge had got."""
+"""Samples whose mean says how far an edge has got."""
 
 LEVEL_SHIFT_RATIO = 2e-3
 """A change of a level by more than this share of the amplitude moves the plateaus enough to look at them again."""
@@ -180,11 +180,11 @@ def _whole(signal_V: FloatArray, refined: Refined, changes: Changes) -> Changes:
     """The changes that the record shows whole: it may begin after an edge has begun, and end before one has ended."""
     levels = refined.levels
     allowed = CUT_RATIO + 3 * refined.noise.sigma_V / levels.amplitude_V / ENDS**0.5
-    first, last = (
-        (float(np.mean(part)) - levels.low_V) / levels.amplitude_V for part in (signal_V[:ENDS], signal_V[-ENDS:])
-    )
-    begun = first if changes.rising[0] else 1.0 - first
-    unended = 1.0 - last if changes.rising[-1] else last
+    head = running_mean(signal_V[: int(changes.index[0]) + 1], ENDS) - levels.low_V
+    tail = running_mean(signal_V[int(changes.index[-1]) :], ENDS) - levels.low_V
+    amplitude = levels.amplitude_V
+    begun = float(np.min(head)) / amplitude if changes.rising[0] else 1.0 - float(np.max(head)) / amplitude
+    unended = 1.0 - float(np.max(tail)) / amplitude if changes.rising[-1] else float(np.min(tail)) / amplitude
     whole = np.ones(changes.index.size, dtype=np.bool_)
     whole[0] &= begun <= allowed
     whole[-1] &= unended <= allowed

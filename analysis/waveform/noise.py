@@ -35,6 +35,9 @@ STRETCHES = 16
 MOST_POOLED = 24
 """Channels whose stretches at rest are looked at together for the correlation of their noise."""
 
+UNDITHERED = 0.985
+"""Share of samples in two codes from which noise does not dither them."""
+
 FEWEST_CODES, MOST_CODES = 8, 65536
 """Reach of a record, in its smallest steps, between which the smallest step is taken for a code."""
 
@@ -149,6 +152,35 @@ def u_quantised_V(sigma_V: float, step_V: float) -> float:
     if step_V <= 0:
         return 0.0
     return step_V / math.sqrt(12) * math.exp(-2 * (math.pi * sigma_V / step_V) ** 2)
+
+
+def u_of_codes(values_V: FloatArray, origin_V: float, sigma_V: float, step_V: float) -> float:
+    """Standard uncertainty that codes leave in the level of a state, from the codes that it shows.
+
+    Where two neighbouring codes hold nearly all samples the noise is too small to dither: with a share p of the samples in the more
+    frequent one, the level lies somewhere between the border of the two codes and where full dithering would put it, a stretch of
+    (p - 1/2) codes, taken as a rectangle. With more codes it is `u_quantised_V` of the noise less that of the codes themselves.
+
+    Parameters
+    ----------
+    values_V : array, shape (n,), volts
+        Samples of the state.
+    origin_V : float
+        The voltage of any code.
+    sigma_V, step_V : float
+        Noise of a sample as it shows, and the voltage of a code.
+
+    References
+    ----------
+    B. Widrow and I. Kollar, Quantization Noise, 2008; Sheppard's correction for the variance of rounded values.
+    """
+    if step_V <= 0 or values_V.size == 0:
+        return u_quantised_V(sigma_V, step_V)
+    codes = np.round((values_V - origin_V) / step_V).astype(np.intp)
+    counts = np.sort(np.bincount(codes - codes.min()))[::-1]
+    if float(np.sum(counts[:2])) >= UNDITHERED * codes.size:
+        return step_V * abs(float(counts[0]) / float(np.sum(counts[:2])) - 0.5) / math.sqrt(3) + 0.02 * step_V
+    return u_quantised_V(math.sqrt(max(sigma_V**2 - step_V**2 / 12, 0.0)), step_V)
 
 
 def flat_noise(residuals_V: Sequence[FloatArray], *, fallback_V: float) -> Noise:

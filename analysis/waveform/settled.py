@@ -25,7 +25,7 @@ from darkedge.analysis.waveform.edges import TEN_NINETY, BoolArray, IntArray, Tr
 from darkedge.analysis.waveform.first_look import FirstLook
 from darkedge.analysis.waveform.least_squares import WhiteFits, fit_white_rows
 from darkedge.analysis.waveform.levels import StateLevels
-from darkedge.analysis.waveform.noise import ENOUGH_INDEPENDENT, Noise, pooled, rest_noise, u_quantised_V
+from darkedge.analysis.waveform.noise import ENOUGH_INDEPENDENT, Noise, pooled, rest_noise, u_of_codes, u_quantised_V
 from darkedge.analysis.waveform.one_pole import (
     LN_S,
     LN_TAU,
@@ -359,6 +359,7 @@ class _Job:
         self.matrix = np.empty((0, 0, 0))
         self.sigma_V, self.sigma, self.widening = np.empty(0), np.empty(0), np.empty(0)
         self.rests: list[list[FloatArray]] = [[] for _ in looks]
+        self.rest_is_high: list[list[bool]] = [[] for _ in looks]
         self.pools = pools
 
     def channels(self, fractions: tuple[float, ...]) -> list[SettledChannel | None]:
@@ -508,12 +509,14 @@ class _Job:
         look, (first, last) = self.looks[channel], self.bounds[channel : channel + 2].tolist()
         signal, cut = look.record.signal_V, self.cut
         rest: list[FloatArray] = []
+        is_high: list[bool] = []
         left = MOST_REST
         for row in range(first, last):
             origin, tau, s, swing = self._course(row, parameters)
             if row == first:
                 end = int(max(origin - 4 * s, 0.0))
                 rest.append(signal[max(end - left, 0) : end] - look.levels.low_V)
+                is_high.append(not cut.rising[row])
             begin = int(origin + 4 * s + 3 * tau) + 2
             end = min(int(cut.window[row, 1]) if row + 1 < last else signal.size, begin + left)
             if end - begin >= 4:
@@ -521,10 +524,11 @@ class _Job:
                 if tau > max(0.2, s / 3):
                     part += swing * np.exp((origin - np.arange(begin, end)) / tau + 0.5 * (s / tau) ** 2)
                 rest.append(part)
+                is_high.append(bool(cut.rising[row]))
             left -= rest[-1].size
             if left < 64:
                 break
-        self.rests[channel] = rest
+        self.rests[channel], self.rest_is_high[channel] = rest, is_high
         return rest_noise(rest, fallback_V=look.hiss_V)
 
     def _course(self, row: int, parameters: FloatArray) -> tuple[float, float, float, float]:
@@ -574,12 +578,12 @@ class _Job:
         edges = self._edges(joint, members)
         transitions = edges.transitions(fractions)
         found: list[SettledChannel | None] = []
-        for k, (look, noise) in enumerate(zip(self.looks, noises, strict=True)):
+        for k, noise in enumerate(noises):
             if not good[k]:
                 found.append(None)
                 continue
-            u_code = u_quantised_V(noise.sigma_V, look.step_V)
-            u = np.sqrt(np.diagonal(covariance[k]) + u_code**2)
+            u_code = self._u_codes(k, noise)
+            u = np.sqrt(np.diagonal(covariance[k]) + np.square(u_code))
             levels = StateLevels(
                 low_V=float(joint[k, 0]), high_V=float(joint[k, 1]), u_low_V=float(u[0]), u_high_V=float(u[1])
             )
@@ -630,6 +634,21 @@ class _Job:
         ends = np.where(rising[:, None], upward, 1.0 - upward[:, ::-1])
         swap = np.where(rising[:, None, None], np.eye(2), -np.eye(2)[::-1])
         return ends, swap / amplitude[:, None, None]
+
+    def _u_codes(self, channel: int, noise: Noise) -> tuple[float, float]:
+        """What codes leave open of low and high level."""
+        look = self.looks[channel]
+        if look.step_V <= 0 or noise.sigma_V > look.step_V:
+            both = u_quantised_V(noise.sigma_V, look.step_V)
+            return both, both
+        rest, high = self.rests[channel], self.rest_is_high[channel]
+        origin = float(look.record.signal_V[0]) - look.levels.low_V
+        found = []
+        for state in (False, True):
+            parts = [part for part, is_high in zip(rest, high, strict=True) if is_high == state]
+            values = np.concatenate(parts) if parts else np.empty(0)
+            found.append(u_of_codes(values, origin, noise.sigma_V, look.step_V))
+        return found[0], found[1]
 
     def _parted(self, fits: WhiteFits) -> _Parted:
         """What a fit says of the levels of each edge, and of its shape once the levels are known."""
